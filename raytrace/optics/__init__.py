@@ -1,0 +1,21 @@
+"""Light through drops: ray tracing, the sun's disc, and the scattering table that everything after it reads."""
+
+_WHERE = {
+    "ScatteringTable": "table",
+    "scattering_table": "scattering",
+    "trace_sphere": "sphere",
+}
+__all__ = sorted(_WHERE)
+
+
+def __getattr__(name):
+    # compiled code is loaded by whoever uses it, not by `import raytrace`
+    if name in _WHERE:
+        import importlib
+
+        return getattr(importlib.import_module(f"raytrace.optics.{_WHERE[name]}"), name)
+    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+
+
+def __dir__():
+    return __all__

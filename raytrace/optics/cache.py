@@ -1,0 +1,149 @@
+"""Traced tables on disk: keyed by everything that determines them, written whole, verified on reading, bounded in size.
+
+A file is one line of JSON (format, key, shapes, SHA-256 of the rest) and then the arrays, little-endian float64 in C
+order. A file that is damaged, cut short, or not ours is left unused with a warning.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import warnings
+from pathlib import Path
+
+import numpy as np
+
+from raytrace.errors import CacheWarning
+from raytrace.files import write_atomic
+from raytrace.jit import cache_root
+from raytrace.optics.table import ScatteringTable
+
+FORMAT = "raytrace scattering table 1"
+SUFFIX = ".table"
+LIMIT_BYTES = 2 * 1024**3
+_ARRAYS = ("phase_sr", "standard_error_sr", "angle_edges_deg", "wavelength_nm", "index_n", "index_k", "left_over", "absorbed")
+_SOURCES = ("sphere.py", "sphere_kernels.py", "table.py", "../random_stream.py")
+
+
+def table_cache_folder() -> Path | None:
+    """Folder of the tables; None where it can neither be read nor made."""
+    folder = cache_root() / "tables"
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError:
+        return None
+    return folder
+
+
+def table_cache_size() -> tuple[int, int]:
+    """Number of tables on disk and the bytes that they take."""
+    folder = table_cache_folder()
+    sizes = [_size(path) for path in folder.glob("*" + SUFFIX)] if folder else []
+    return len(sizes), sum(sizes)
+
+
+def table_key(**determines) -> str:
+    """Hash of everything that determines a table: the arguments, and the sources of the tracer."""
+    digest = hashlib.sha256(FORMAT.encode())
+    here = Path(__file__).parent
+    for name in _SOURCES:
+        digest.update((here / name).read_bytes())
+    for name in sorted(determines):
+        value = determines[name]
+        digest.update(f"|{name}=".encode())
+        digest.update(np.ascontiguousarray(value).tobytes() if isinstance(value, np.ndarray) else repr(value).encode())
+    return digest.hexdigest()
+
+
+def path_of(key: str) -> Path | None:
+    """File of a key; None without a folder."""
+    folder = table_cache_folder()
+    return folder / (key[:40] + SUFFIX) if folder else None
+
+
+def load(key: str) -> ScatteringTable | None:
+    """The table of a key, or None where there is none or it cannot be trusted."""
+    path = path_of(key)
+    try:
+        if path is None or not path.is_file():
+            return None
+        with path.open("rb") as file:
+            head = json.loads(file.readline(65_536))
+            if head["format"] != FORMAT or head["key"] != key:
+                raise ValueError("it belongs to something else")
+            shapes = {name: tuple(head["shapes"][name]) for name in _ARRAYS}
+            count = {name: int(np.prod(shape)) for name, shape in shapes.items()}
+            if sum(count.values()) * 8 != _size(path) - file.tell():
+                raise ValueError("it is cut short")
+            data = np.fromfile(file, dtype="<f8")
+        if hashlib.sha256(data).hexdigest() != head["sha256"]:
+            raise ValueError("its checksum does not hold")
+        arrays, at = {}, 0
+        for name in _ARRAYS:
+            arrays[name] = data[at : at + count[name]].reshape(shapes[name])
+            at += count[name]
+        os.utime(path)  # last use, for the bound on size
+        index = arrays.pop("index_n") + 1j * arrays.pop("index_k")
+        return ScatteringTable(**arrays, index=index, method=head["method"], rays=head["rays"], seed=head["seed"])
+    except (OSError, ValueError, KeyError, TypeError, MemoryError) as problem:
+        warnings.warn(f"cache file {path.name} is left unused: {problem}; the table is traced anew", CacheWarning, stacklevel=2)
+        return None
+
+
+def store(key: str, table: ScatteringTable) -> None:
+    """Keep a table; a full disk or a folder that cannot be written is a warning, never an error."""
+    path = path_of(key)
+    if path is None:
+        return
+    parts = {name: getattr(table, name, None) for name in _ARRAYS}
+    parts["index_n"], parts["index_k"] = table.index.real, table.index.imag
+    parts = {name: np.ascontiguousarray(value, dtype="<f8") for name, value in parts.items()}
+    digest = hashlib.sha256()
+    for value in parts.values():
+        digest.update(value)
+    head = {
+        "format": FORMAT,
+        "key": key,
+        "shapes": {name: value.shape for name, value in parts.items()},
+        "sha256": digest.hexdigest(),
+        "method": table.method,
+        "rays": table.rays,
+        "seed": table.seed,
+    }
+
+    def write(file):
+        file.write(json.dumps(head).encode() + b"\n")
+        for value in parts.values():
+            file.write(value.data)
+
+    try:
+        write_atomic(path, write)
+        _bound(path)
+    except OSError as problem:
+        warnings.warn(f"the table could not be kept in {path.parent}: {problem}", CacheWarning, stacklevel=2)
+
+
+def _bound(newest: Path) -> None:
+    """Drop the tables used longest ago until the folder is within its limit; the newest stays."""
+    files = sorted((p for p in newest.parent.glob("*" + SUFFIX) if p != newest), key=_last_use)
+    total = _size(newest) + sum(_size(p) for p in files)
+    for path in files:
+        if total <= LIMIT_BYTES:
+            break
+        total -= _size(path)
+        path.unlink(missing_ok=True)
+
+
+def _size(path: Path) -> int:
+    try:
+        return path.stat().st_size
+    except OSError:
+        return 0
+
+
+def _last_use(path: Path) -> float:
+    try:
+        return path.stat().st_mtime
+    except OSError:
+        return 0.0

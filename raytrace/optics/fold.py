@@ -1,0 +1,168 @@
+"""The sun is a disc: the scattering table folded with its limb-darkened profile, on the sphere.
+
+A ring of the disc at distance rho from its centre lights the drop from directions whose scattering angle toward a fixed
+viewer runs from |theta - rho| to theta + rho. By the spherical law of cosines the share of the ring below the angle
+alpha is arccos[(cos alpha - cos theta cos rho) / (sin theta sin rho)] / pi, which gives the weight of each bin in closed
+form; only the sum over rings and over the width of the viewer's bin is numerical. Near 0 and 180 degrees and where
+cot theta matters this is not a convolution in one dimension.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+
+import numpy as np
+
+from raytrace import cast
+from raytrace.jit import kernel, run_all
+from raytrace.optics.table import ScatteringTable
+
+# Gauss-Legendre nodes in mu = cos(angle from the disc's normal) over the disc, and over the width of a viewer's bin
+_RINGS = 24
+_IN_BIN = 4
+
+
+@kernel
+def ring_weights(first, last, edges, rho, basis, theta_nodes, theta_weights, start, weights):
+    """Weights of the table's bins in each folded bin, for each power of the limb's mu.
+
+    Parameters
+    ----------
+    first, last : int
+        Range of folded bins to work out.
+    edges : (bins + 1,) float64
+        Edges of the bins [rad].
+    rho : (rings,) float64
+        Distance of the rings from the disc's centre [rad].
+    basis : (powers, rings) float64
+        Quadrature weight of each ring times mu^power.
+    theta_nodes, theta_weights : (nodes,) float64
+        Gauss-Legendre nodes in -1 to 1 and their weights.
+    start : (bins,) int64
+        First table bin of each folded bin; written.
+    weights : (powers, bins, width) float64
+        Added to; zero on entry.
+    """
+    bins = edges.size - 1
+    powers, _, width = weights.shape
+    reach = rho[0]
+    for m in range(rho.size):
+        reach = max(reach, rho[m])
+    per_bin = bins / math.pi
+    for i in range(first, last):
+        j0 = max(0, min(int((edges[i] - reach) * per_bin - 1e-6), bins - width))
+        start[i] = j0
+        middle, half = 0.5 * (edges[i] + edges[i + 1]), 0.5 * (edges[i + 1] - edges[i])
+        norm = 0.0
+        for t in range(theta_nodes.size):
+            norm += theta_weights[t] * math.sin(middle + half * theta_nodes[t])
+        for t in range(theta_nodes.size):
+            theta = middle + half * theta_nodes[t]
+            sin_t, cos_t = math.sin(theta), math.cos(theta)
+            here = theta_weights[t] * sin_t / norm
+            for m in range(rho.size):
+                a = cos_t * math.cos(rho[m])
+                c = 1.0 / (sin_t * math.sin(rho[m]))
+                below = 0.0
+                for j in range(width):
+                    u = (math.cos(edges[j0 + j + 1]) - a) * c
+                    upto = 1.0 if u <= -1.0 else (0.0 if u >= 1.0 else math.acos(u) / math.pi)
+                    share = (upto - below) * here
+                    below = upto
+                    if share != 0.0:
+                        for q in range(powers):
+                            weights[q, i, j] += basis[q, m] * share
+
+
+@kernel
+def apply_weights(values, start, weights, squares, out):
+    """out[row, i] = sum over j of weights[i, j] values[row, start[i] + j]; with squares, root of the sum of squares.
+
+    Parameters
+    ----------
+    values, out : (rows, bins) float64
+    start : (bins,) int64
+    weights : (bins, width) float64
+    squares : bool
+    """
+    rows, bins = values.shape
+    width = weights.shape[1]
+    for r in range(rows):
+        for i in range(bins):
+            total = 0.0
+            j0 = start[i]
+            if squares:
+                for j in range(width):
+                    total += (weights[i, j] * values[r, j0 + j]) ** 2
+                out[r, i] = math.sqrt(total)
+            else:
+                for j in range(width):
+                    total += weights[i, j] * values[r, j0 + j]
+                out[r, i] = total
+
+
+def disc_weights(angle_edges_deg, diameter_deg: float, powers: int, *, threads: int | None = None):
+    """Weights of the fold for a disc whose radiance is mu^power, power = 0 to powers - 1.
+
+    Returns
+    -------
+    start : (bins,) int64
+        First table bin that each folded bin draws from.
+    weights : (powers, bins, width) float64
+        For power q they add up to 2 / (q + 2), the disc's mean of mu^q.
+    """
+    edges = cast.f64(np.radians(angle_edges_deg), name="angle_edges_deg", ndim=1)
+    bins = edges.size - 1
+    radius = math.radians(diameter_deg) / 2
+    node, gauss = np.polynomial.legendre.leggauss(_RINGS)
+    mu, gauss = 0.5 * (node + 1), 0.5 * gauss
+    # on the disc dOmega is proportional to 2 mu dmu, with mu^2 = 1 - (sin rho / sin R)^2
+    rho = np.arcsin(math.sin(radius) * np.sqrt(1 - mu**2))
+    basis = np.array([2 * gauss * mu ** (q + 1) for q in range(powers)])
+    width = min(bins, int(math.ceil(2 * radius * bins / math.pi)) + 3)
+    theta_nodes, theta_weights = np.polynomial.legendre.leggauss(_IN_BIN)
+    start = np.empty(bins, dtype=np.int64)
+    weights = np.zeros((powers, bins, width))
+    pieces = np.linspace(0, bins, min(bins, 16) + 1).astype(int)
+    tasks = [
+        (int(a), int(b), edges, rho, basis, theta_nodes, theta_weights, start, weights)
+        for a, b in zip(pieces[:-1], pieces[1:], strict=True)
+    ]
+    run_all(ring_weights, tasks, threads=threads)
+    return start, weights
+
+
+def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int | None = None) -> ScatteringTable:
+    """Fold a table with the sun's disc; see `ScatteringTable.with_sun_disc`.
+
+    The limb darkening is Neckel and Labs (1994), wavelength by wavelength. The standard error is propagated as if the
+    bins were independent; stratified rays make neighbours lean against each other, so it is on the safe side.
+    """
+    from raytrace.light.disc import limb_darkening
+
+    if not (np.isfinite(diameter_deg) and 0 <= diameter_deg <= 10):
+        raise ValueError(f"diameter_deg={diameter_deg!r} given; 0 to 10 works")
+    if table.disc_diameter_deg:
+        raise ValueError(f"a disc of {table.disc_diameter_deg} degrees is folded in already; start from the table without")
+    if diameter_deg == 0:
+        return table
+    if table.wavelength_nm is None:
+        raise ValueError("the sun's limb darkening needs wavelengths; trace with wavelength_nm")
+    profile = limb_darkening(table.wavelength_nm)
+    start, basis = disc_weights(table.angle_edges_deg, diameter_deg, profile.shape[1], threads=threads)
+    phase, error = np.empty_like(table.phase_sr), np.empty_like(table.phase_sr)
+
+    def one_wavelength(w):
+        weights = np.tensordot(profile[w], basis, axes=1)
+        weights /= weights.sum(axis=1, keepdims=True)
+        for p in range(table.paths):
+            for values, out, squares in ((table.phase_sr, phase, False), (table.standard_error_sr, error, True)):
+                folded = np.empty_like(values[p, :, w])
+                apply_weights(np.ascontiguousarray(values[p, :, w]), start, weights, squares, folded)
+                out[p, :, w] = folded
+
+    run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
+    return dataclasses.replace(
+        table, phase_sr=phase, standard_error_sr=error, disc_diameter_deg=float(diameter_deg)
+    )

@@ -1,0 +1,86 @@
+"""From the scene to its scattering tables, traced or from the cache."""
+
+from __future__ import annotations
+
+import sys
+
+import numpy as np
+
+from raytrace.drops.sizes import drop_sizes
+from raytrace.drops.water import refractive_index
+from raytrace.errors import InputError
+from raytrace.optics import cache
+from raytrace.optics.table import ScatteringTable
+
+SPECTRUM_NM = (380.0, 780.0)
+
+
+def wavelengths_nm(optics) -> np.ndarray:
+    """Wavelengths of a scene's optics, from 380 to at most 780 nm in steps [nm]."""
+    first, last = SPECTRUM_NM
+    return first + optics.wavelength_step_nm * np.arange(int((last - first) / optics.wavelength_step_nm + 1e-9) + 1)
+
+
+def scattering_table(
+    scene, curtain: int = 0, *, threads: int | None = None, use_cache: bool = True, progress: bool = False
+) -> ScatteringTable:
+    """Scattering by the mean drop of one curtain of rain, for parallel light.
+
+    In ray optics the size of a drop matters only through absorption, whose chord scales with the diameter; the
+    cross-section weighted mean diameter (volume over cross-section) is exact to first order in that absorption.
+
+    Parameters
+    ----------
+    scene : Scene
+    curtain : int
+        Which of the scene's tables [rain].
+    threads : int, optional
+    use_cache : bool
+        Whether tables are read from and kept in the cache.
+    progress : bool
+        Show a bar on standard error.
+
+    Returns
+    -------
+    ScatteringTable
+
+    Raises
+    ------
+    InputError
+        If the scene has no such curtain.
+    """
+    arguments = _arguments(scene, curtain)
+    key = cache.table_key(**arguments)
+    if use_cache and (table := cache.load(key)) is not None:
+        return table
+    from tqdm import tqdm
+
+    from raytrace.optics.sphere import trace_sphere
+
+    with tqdm(total=arguments["index"].size, desc="tracing drops", unit="wavelength", disable=not progress, file=sys.stderr) as bar:
+        table = trace_sphere(**arguments, threads=threads, on_done=bar.update)
+    if use_cache:
+        cache.store(key, table)
+    return table
+
+
+def is_cached(scene) -> list[bool]:
+    """Whether the table of each curtain lies in the cache (it is not read)."""
+    paths = [cache.path_of(cache.table_key(**_arguments(scene, c))) for c in range(len(scene.rain))]
+    return [path is not None and path.is_file() for path in paths]
+
+
+def _arguments(scene, curtain: int) -> dict:
+    if not 0 <= curtain < len(scene.rain):
+        raise InputError(f"curtain {curtain} given; the scene has {len(scene.rain)}, counted from 0")
+    rain, optics = scene.rain[curtain], scene.optics
+    wavelength = wavelengths_nm(optics)
+    return {
+        "index": refractive_index(rain, scene.air, wavelength),
+        "wavelength_nm": wavelength,
+        "diameter_mm": float(drop_sizes(rain).effective_diameter_mm),
+        "paths": optics.paths,
+        "rays": optics.rays,
+        "bins": optics.bins,
+        "seed": optics.seed,
+    }

@@ -1,0 +1,134 @@
+"""Monte Carlo ray tracing through a sphere: every ray feeds every Debye order."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from raytrace import cast
+from raytrace.jit import run_all
+from raytrace.optics.sphere_kernels import SphereBlock, merge_blocks, trace_sphere_block
+from raytrace.optics.table import ScatteringTable, ring_solid_angle_sr
+from raytrace.random_stream import stream_state
+
+# Independent blocks behind each standard error. Fixed, so that the bytes do not depend on the number of threads.
+BLOCKS = 32
+METHOD = "rays"
+_INDEX_RANGE = (1.0001, 4.0)
+_LARGEST_K = 1e-3
+
+
+def trace_sphere(
+    index,
+    *,
+    paths: int = 8,
+    rays: int = 4_000_000,
+    bins: int = 9_000,
+    seed: int = 0,
+    wavelength_nm=None,
+    diameter_mm: float | None = None,
+    threads: int | None = None,
+    on_done=None,
+) -> ScatteringTable:
+    """Trace rays of unpolarised parallel light through a sphere.
+
+    Rays fall on the sphere's disc, one in each of many rings of equal area (jittered and stratified in b²). At every hit
+    of the surface the ray deposits what leaves, weighted by Fresnel's formulas for each polarisation, in the histogram
+    of its order, and what is reflected goes on: p = 0 external reflection, 1 straight through, 2 the primary bow, and
+    so on. Directions after van de Hulst (1957), *Light Scattering by Small Particles*, section 12.21.
+
+    Parameters
+    ----------
+    index : float or (n_wavelength,) array, real or complex
+        Refractive index relative to air, n + ik with 1 < n <= 4 and 0 <= k <= 0.001 (k enters the absorption along
+        the chords only, not Fresnel's formulas).
+    paths : int
+        Orders traced, p = 0 to paths - 1.
+    rays : int
+        Incident rays a wavelength, rounded up to whole blocks.
+    bins : int
+        Bins of the scattering angle over 0 to 180 degrees.
+    seed : int
+    wavelength_nm : (n_wavelength,) array, optional
+        Wavelengths in air; needed for absorption and for the sun's disc [nm].
+    diameter_mm : float, optional
+        Diameter of the drop; needed where k > 0 [mm].
+    threads : int, optional
+        All cores unless given; the result does not depend on it.
+    on_done : callable, optional
+        Called after each wavelength.
+
+    Returns
+    -------
+    ScatteringTable
+
+    Raises
+    ------
+    ValueError
+        If an argument is out of range; the message gives the range.
+    """
+    n, k, wavelength_nm = _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm)
+    per_block = -(-rays // BLOCKS)
+    edges = np.linspace(0.0, 180.0, bins + 1)
+    # half the power of unpolarised light is in each polarisation
+    per_sr = 0.5 / (per_block * ring_solid_angle_sr(edges))
+    phase = np.empty((paths, 2, n.size, bins))
+    error = np.empty_like(phase)
+    rows = np.empty((BLOCKS, paths, bins, 2))
+    balance = np.empty((BLOCKS, 2, 2))
+    totals = np.empty((n.size, 2))
+    for w in range(n.size):
+        absorption = 0.0
+        if k[w] > 0:
+            absorption = 4.0 * k[w] * np.pi * diameter_mm * 1e6 / wavelength_nm[w]
+        tasks = []
+        for b in range(BLOCKS):
+            stream = stream_state(seed, b, w)
+            block = SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream)
+            tasks.append((block, rows[b], balance[b]))
+        run_all(trace_sphere_block, tasks, threads=threads)
+        run_all(merge_blocks, [(rows, p, phase[p, :, w], error[p, :, w]) for p in range(paths)], threads=threads)
+        totals[w] = balance.sum(axis=(0, 2)) / (2.0 * BLOCKS * per_block)
+        if on_done:
+            on_done()
+    phase *= per_sr
+    error *= per_sr
+    return ScatteringTable(
+        phase_sr=phase,
+        standard_error_sr=error,
+        angle_edges_deg=edges,
+        wavelength_nm=wavelength_nm,
+        index=n + 1j * k,
+        left_over=totals[:, 0],
+        absorbed=totals[:, 1],
+        method=METHOD,
+        rays=per_block * BLOCKS,
+        seed=int(seed),
+    )
+
+
+def _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm):
+    index = np.atleast_1d(np.asarray(index, dtype=np.complex128))
+    n, k = cast.f64(index.real, name="index", ndim=1), cast.f64(index.imag, name="index", ndim=1)
+    if not ((n >= _INDEX_RANGE[0]) & (n <= _INDEX_RANGE[1])).all():
+        raise ValueError(f"index {n.min():g} to {n.max():g} given; rays are traced for {_INDEX_RANGE[0]} to 4")
+    if not ((k >= 0) & (k <= _LARGEST_K)).all():
+        raise ValueError(f"imaginary part of the index from {k.min():g} to {k.max():g} given; 0 to {_LARGEST_K} works")
+    for name, value, low, high in (
+        ("paths", paths, 1, 64),
+        ("rays", rays, BLOCKS, 10**12),
+        ("bins", bins, 2, 10**6),
+        ("seed", seed, 0, 2**64 - 1),
+    ):
+        if not (isinstance(value, (int, np.integer)) and low <= value <= high):
+            raise ValueError(f"{name}={value!r} given; whole numbers from {low} to {high} work")
+    if wavelength_nm is not None:
+        wavelength_nm = cast.f64(np.atleast_1d(wavelength_nm), name="wavelength_nm", ndim=1)
+        if wavelength_nm.shape != n.shape:
+            raise ValueError(f"{wavelength_nm.size} wavelengths given for {n.size} indices; one each works")
+        if not (wavelength_nm > 0).all():
+            raise ValueError("wavelength_nm has values that are not above zero")
+    if diameter_mm is not None and not (np.isfinite(diameter_mm) and diameter_mm > 0):
+        raise ValueError(f"diameter_mm={diameter_mm!r} given; a number above zero works")
+    if (k > 0).any() and (wavelength_nm is None or diameter_mm is None):
+        raise ValueError("an absorbing index needs wavelength_nm and diameter_mm")
+    return n, k, wavelength_nm
