@@ -75,6 +75,7 @@ def trace_sphere(
     error = np.empty_like(phase)
     rows = np.empty((BLOCKS, paths, bins, 2))
     balance = np.empty((BLOCKS, 2, 2))
+    mean, spread = np.empty((2, paths, 2, bins))
     totals = np.empty((n.size, 2))
     for w in range(n.size):
         absorption = 0.0
@@ -86,7 +87,8 @@ def trace_sphere(
             block = SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream)
             tasks.append((block, rows[b], balance[b]))
         run_all(trace_sphere_block, tasks, threads=threads)
-        run_all(merge_blocks, [(rows, p, phase[p, :, w], error[p, :, w]) for p in range(paths)], threads=threads)
+        run_all(merge_blocks, [(rows, p, mean[p], spread[p]) for p in range(paths)], threads=threads)
+        phase[:, :, w], error[:, :, w] = mean, spread
         totals[w] = balance.sum(axis=(0, 2)) / (2.0 * BLOCKS * per_block)
         if on_done:
             on_done()

@@ -1,0 +1,277 @@
+"""Curtains of rain: where drops are, how they dim what is behind, and how much sunlight reaches the eye after one scattering.
+
+A curtain fills a sector of air between two level distances, two heights and two azimuths, with soft edges. Along a line
+of sight the extinction adds up over curtains; sunlight is dimmed on its way in by the same curtains, then scattered
+once, then dimmed on its way to the eye. Both ways out of one density, so that what is scattered out of the view is what
+can be scattered into it: with a uniform surround the rain disappears.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+
+from raytrace.jit import kernel, run_all
+from raytrace.sky.noise import smoothstep
+
+# Nodes of the table of sunward optical depth (azimuth, level distance, height) and steps along each path
+_GRID = (96, 40, 28)
+_SUN_STEPS = 64
+VIEW_STEPS = 40
+
+# Columns of the array of curtains, one row a curtain
+EXTINCTION, NEAR, FAR, BOTTOM, TOP, EDGE, EDGE_TOP, AZIMUTH, HALF, EDGE_AZIMUTH = range(10)
+
+
+class Curtains(NamedTuple):
+    """State of all curtains as kernels take it."""
+
+    shape: np.ndarray  # (curtains, 10) extinction [1/m], limits [m], azimuth of the middle, half width, edge [rad]
+    sun: tuple  # unit vector to the sun
+    sun_depth: np.ndarray  # (curtains, *_GRID) optical depth from a point of the curtain to the sun
+    haze: float  # extinction of the air along the view [1/m]
+
+
+@kernel
+def azimuth_window(curtain, x, y):
+    """Share of the curtain's density left by its azimuth limits in the level direction (x, y)."""
+    half, edge = curtain[HALF], curtain[EDGE_AZIMUTH]
+    if half >= math.pi - 1e-9:
+        return 1.0
+    level = math.hypot(x, y)
+    if level < 1e-12:
+        return 0.0
+    cosine = (x * math.sin(curtain[AZIMUTH]) + y * math.cos(curtain[AZIMUTH])) / level
+    away = math.acos(min(1.0, max(-1.0, cosine)))
+    return 1.0 - smoothstep(half - 0.5 * edge, half + 0.5 * edge, away)
+
+
+@kernel
+def level_window(curtain, r, z):
+    """Share of the density left by the limits of distance and height."""
+    e, t = 0.5 * curtain[EDGE], 0.5 * curtain[EDGE_TOP]
+    density = smoothstep(curtain[NEAR] - e, curtain[NEAR] + e, r)
+    density *= 1.0 - smoothstep(curtain[FAR] - e, curtain[FAR] + e, r)
+    if density > 0.0:
+        density *= smoothstep(curtain[BOTTOM] - t, curtain[BOTTOM] + t, z)
+        density *= 1.0 - smoothstep(curtain[TOP] - t, curtain[TOP] + t, z)
+    return density
+
+
+@kernel
+def extent(curtain):
+    """Outer limits with their soft edges: least and largest level distance, least and largest height."""
+    e, t = 0.5 * curtain[EDGE], 0.5 * curtain[EDGE_TOP]
+    return max(curtain[NEAR] - e, 0.0), curtain[FAR] + e, curtain[BOTTOM] - t, curtain[TOP] + t
+
+
+@kernel
+def depth_to_sun(shape, sun, x, y, z):
+    """Optical depth from a point to the sun through all curtains (midpoint rule up to the last curtain's edge)."""
+    far, top = 0.0, -1e30
+    for c in range(shape.shape[0]):
+        _, f, _, t = extent(shape[c])
+        far, top = max(far, f), max(top, t)
+    # path until it is above every curtain or outside the widest circle
+    level2 = sun[0] * sun[0] + sun[1] * sun[1]
+    along = x * sun[0] + y * sun[1]
+    length = 1e30
+    if level2 > 1e-12:
+        inside = along * along - level2 * (x * x + y * y - far * far)
+        length = (-along + math.sqrt(max(inside, 0.0))) / level2
+    if sun[2] > 1e-9:
+        length = min(length, max(top - z, 0.0) / sun[2])
+    length = max(length, 0.0)
+    step = length / _SUN_STEPS
+    total = 0.0
+    for k in range(_SUN_STEPS):
+        s = (k + 0.5) * step
+        px, py, pz = x + s * sun[0], y + s * sun[1], z + s * sun[2]
+        r = math.hypot(px, py)
+        for c in range(shape.shape[0]):
+            density = level_window(shape[c], r, pz)
+            if density > 0.0:
+                total += shape[c, EXTINCTION] * density * azimuth_window(shape[c], px, py)
+    return total * step
+
+
+@kernel
+def fill_sun_depth(shape, sun, c, i, out):
+    """Sunward optical depth at one azimuth node of one curtain's table, into out (curtains, *_GRID)."""
+    near, far, bottom, top = extent(shape[c])
+    n_a, n_r, n_z = out.shape[1:]
+    reach = min(math.pi, shape[c, HALF] + 0.5 * shape[c, EDGE_AZIMUTH])
+    azimuth = shape[c, AZIMUTH] + reach * (2.0 * i / (n_a - 1) - 1.0)
+    for j in range(n_r):
+        r = near + (far - near) * j / (n_r - 1)
+        for k in range(n_z):
+            z = bottom + (top - bottom) * k / (n_z - 1)
+            out[c, i, j, k] = depth_to_sun(shape, sun, r * math.sin(azimuth), r * math.cos(azimuth), z)
+
+
+@kernel
+def sun_depth_at(rain, c, azimuth_at, r, z):
+    """Optical depth to the sun from the table of one curtain; trilinear.
+
+    Parameters
+    ----------
+    azimuth_at : float
+        Azimuth from the curtain's middle, over the reach of its table, -1 to 1.
+    """
+    near, far, bottom, top = extent(rain.shape[c])
+    n_a, n_r, n_z = rain.sun_depth.shape[1:]
+    a = min(max(0.5 * (azimuth_at + 1.0) * (n_a - 1), 0.0), n_a - 1.0001)
+    b = min(max((r - near) / (far - near) * (n_r - 1), 0.0), n_r - 1.0001)
+    d = min(max((z - bottom) / (top - bottom) * (n_z - 1), 0.0), n_z - 1.0001)
+    i, j, k = int(a), int(b), int(d)
+    a, b, d = a - i, b - j, d - k
+    grid = rain.sun_depth[c]
+    low = (1 - b) * ((1 - d) * grid[i, j, k] + d * grid[i, j, k + 1])
+    low += b * ((1 - d) * grid[i, j + 1, k] + d * grid[i, j + 1, k + 1])
+    high = (1 - b) * ((1 - d) * grid[i + 1, j, k] + d * grid[i + 1, j, k + 1])
+    high += b * ((1 - d) * grid[i + 1, j + 1, k] + d * grid[i + 1, j + 1, k + 1])
+    return (1 - a) * low + a * high
+
+
+@kernel
+def clip_path(curtain, x, y, z, eye, reach):
+    """Part of a line of sight inside a curtain's outer limits, as distances from the eye; empty where first >= last."""
+    near, far, bottom, top = extent(curtain)
+    level = math.hypot(x, y)
+    first, last = 0.0, reach
+    if level > 1e-9:
+        first, last = near / level, min(reach, far / level)
+    elif near > 0.0:
+        return 0.0, 0.0
+    if abs(z) > 1e-9:
+        a, b = (bottom - eye) / z, (top - eye) / z
+        first, last = max(first, min(a, b)), min(last, max(a, b))
+    elif not bottom <= eye <= top:
+        return 0.0, 0.0
+    return first, last
+
+
+@kernel
+def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
+    """Follow one line of sight through the rain.
+
+    Parameters
+    ----------
+    rain : Curtains
+    x, y, z : float
+        Unit vector of the view.
+    eye : float
+        Height of the eye [m].
+    reach : float
+        Distance at which the view ends, on the ground or far away [m].
+    sunlit : (curtains,) float64
+        Written: integral of extinction times both transmittances; times irradiance and phase function it is radiance.
+    skylit : (curtains,) float64
+        Written: share of the view that the curtain's drops fill, dimmed on the way to the eye.
+    marks : (5 * curtains,) float64
+        Scratch.
+
+    Returns
+    -------
+    transmittance : float
+        Of all rain along the view.
+    """
+    count = rain.shape.shape[0]
+    # scratch: ends of the parts inside, then depth of a step, azimuth in the sunward table, and azimuth window
+    ends, passes, places, windows = marks[: 2 * count], marks[2 * count :], marks[3 * count :], marks[4 * count :]
+    n = 0
+    for c in range(count):
+        curtain = rain.shape[c]
+        sunlit[c] = skylit[c] = 0.0
+        first, last = clip_path(curtain, x, y, z, eye, reach)
+        windows[c] = azimuth_window(curtain, x, y)
+        away = math.atan2(x, y) - curtain[AZIMUTH]
+        away -= 2.0 * math.pi * math.floor(away / (2.0 * math.pi) + 0.5)
+        places[c] = away / min(math.pi, curtain[HALF] + 0.5 * curtain[EDGE_AZIMUTH])
+        if first < last and curtain[EXTINCTION] > 0.0 and windows[c] > 0.0:
+            for end in (first, last):
+                # kept in order, so that no step crosses an outer limit
+                k = n
+                while k > 0 and ends[k - 1] > end:
+                    ends[k] = ends[k - 1]
+                    k -= 1
+                ends[k] = end
+                n += 1
+    if n == 0:
+        return 1.0
+    level = math.hypot(x, y)
+    steps = max(2 * VIEW_STEPS // n, 8)
+    depth = 0.0
+    for e in range(n - 1):
+        step = (ends[e + 1] - ends[e]) / steps
+        if step <= 0.0:
+            continue
+        for k in range(steps):
+            s = ends[e] + (k + 0.5) * step
+            r, height = s * level, eye + s * z
+            passed = 0.0
+            for c in range(count):
+                passes[c] = 0.0
+                if windows[c] > 0.0:
+                    density = level_window(rain.shape[c], r, height)
+                    passes[c] = rain.shape[c, EXTINCTION] * windows[c] * density * step
+                    passed += passes[c]
+            if passed <= 0.0:
+                continue
+            # exact for a density that is constant over the step, so that the steps add up to 1 - exp(-depth)
+            taken = math.exp(-depth) * -math.expm1(-passed) / passed
+            for c in range(count):
+                if passes[c] > 0.0:
+                    part = passes[c] * taken
+                    skylit[c] += part
+                    to_sun = sun_depth_at(rain, c, places[c], r, height)
+                    sunlit[c] += part * math.exp(-to_sun - rain.haze * s)
+            depth += passed
+    return math.exp(-depth)
+
+
+def make_curtains(scene, extinction_per_km, sun_vector, haze_per_m: float, *, threads=None) -> Curtains:
+    """Prepare the rain of a scene.
+
+    Parameters
+    ----------
+    scene : Scene
+    extinction_per_km : sequence of float
+        Geometric extinction of each curtain [1/km].
+    sun_vector : (3,) array
+        Unit vector to the sun.
+    haze_per_m : float
+        Extinction of the air along the view [1/m].
+    """
+    sun = tuple(float(v) for v in sun_vector)
+    antisolar_deg = math.degrees(math.atan2(-sun[0], -sun[1]))
+    shape = np.zeros((len(scene.rain), 10))
+    for row, rain, beta in zip(shape, scene.rain, extinction_per_km, strict=True):
+        start, end = azimuth_limits_deg(rain, antisolar_deg)
+        row[:] = (
+            beta * 1e-3,
+            rain.near_m,
+            rain.far_m,
+            rain.bottom_m,
+            rain.top_m,
+            rain.edge_m,
+            rain.edge_top_m,
+            math.radians(0.5 * (start + end)),
+            math.radians(0.5 * (end - start)),
+            math.radians(rain.edge_deg),
+        )
+    depth = np.zeros((len(shape), *_GRID))
+    tasks = [(shape, sun, c, i, depth) for c in range(len(shape)) for i in range(_GRID[0])]
+    run_all(fill_sun_depth, tasks, threads=threads)
+    return Curtains(shape=shape, sun=sun, sun_depth=depth, haze=float(haze_per_m))
+
+
+def azimuth_limits_deg(rain, antisolar_deg: float) -> tuple[float, float]:
+    """Left and right limit of a curtain, the right one larger by at most a full turn [deg]."""
+    start = antisolar_deg - 85.0 if rain.azimuth_from_deg is None else rain.azimuth_from_deg
+    end = antisolar_deg + 85.0 if rain.azimuth_to_deg is None else rain.azimuth_to_deg
+    width = (end - start) % 360.0
+    # 0 to 360 is all round; two equal limits are refused when the scene is read
+    return start, start + (width if width > 0.0 else 360.0)
