@@ -79,7 +79,8 @@ def bin_means(x: np.ndarray, y: np.ndarray, edges: np.ndarray) -> np.ndarray:
     x, y, edges = (np.asarray(a, dtype=np.float64) for a in (x, y, edges))
     if edges[0] < x[0] or edges[-1] > x[-1]:
         raise ValueError(
-            f"wavelength bins from {edges[0]:g} to {edges[-1]:g} nm leave the table; {x[0]:g} to {x[-1]:g} nm would work"
+            f"wavelength bins from {edges[0]:g} to {edges[-1]:g} nm leave the table; "
+            f"{x[0]:g} to {x[-1]:g} nm would work"
         )
     # The integral up to each edge: whole segments before it, then the part of the segment that it cuts.
     gap = np.diff(x)

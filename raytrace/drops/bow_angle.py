@@ -54,7 +54,8 @@ def bow_angle(index: np.ndarray, order: int) -> BowAngle:
 
     Notes
     -----
-    R. Descartes 1637, I. Newton 1704: cos^2 i = (n^2 - 1)/(k (k + 2)), sin r = sin i / n, D = 2 (i - r) + k (180 - 2 r).
+    R. Descartes 1637, I. Newton 1704: cos^2 i = (n^2 - 1)/(k (k + 2)), sin r = sin i / n and
+    D = 2 (i - r) + k (180 - 2 r).
     """
     n = np.real(np.asarray(index))
     _check(n, order)

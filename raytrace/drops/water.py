@@ -24,17 +24,19 @@ def water_density_kg_m3(temperature_c: float) -> float:
     Returns
     -------
     float
-        Density [kg/m3], good to 0.002 here.
+        Density [kg/m3], good to 0.0015.
 
     Notes
     -----
-    G. S. Kell, J. Chem. Eng. Data 20, 97 (1975), doi:10.1021/je60064a005, equation 16 (on the temperature scale of 1968).
+    G. S. Kell, J. Chem. Eng. Data 20, 97 (1975), doi:10.1021/je60064a005, equation 16, on the temperature scale of
+    1968 (1.00024 times today's), times what brings its maximum of 999.972 to today's 999.97495 (M. Tanaka et al.,
+    Metrologia 38, 301 (2001)).
     """
-    t = temperature_c
+    t = 1.00024 * temperature_c
     top = 999.83952 + t * (
         16.945176 + t * (-7.9870401e-3 + t * (-46.170461e-6 + t * (105.56302e-9 - 280.54253e-12 * t)))
     )
-    return top / (1.0 + 16.879850e-3 * t)
+    return top / (1.0 + 16.879850e-3 * t) * (999.97495 / 999.972)
 
 
 def iapws_1997(vacuum_wavelength_nm: np.ndarray, temperature_c: float, density_kg_m3: float) -> np.ndarray:
@@ -95,8 +97,8 @@ def quan_fry_1995(wavelength_nm: np.ndarray, temperature_c: float, salinity_perm
     Notes
     -----
     X. Quan, E. S. Fry, Appl. Opt. 34, 3477 (1995), doi:10.1364/AO.34.003477, equation 3. At no salinity it gives
-    1.33300 for the sodium line at 20 degC, where fresh water has 1.33299 relative to air and 1.33335 relative to vacuum:
-    the formula is relative to air.
+    1.33300 for the sodium line at 20 degC, where fresh water has 1.33298 relative to air and 1.33335 relative to
+    vacuum: the formula is relative to air.
     """
     w, t = np.asarray(wavelength_nm, dtype=np.float64), temperature_c
     return (
@@ -152,7 +154,7 @@ def _sea(rain: Rain, air: Air, wavelength_nm: np.ndarray) -> np.ndarray:
 
 
 WATERS = {"fresh": _fresh, "sea": _sea}
-"""Kinds of water by the name in the scene file: functions (rain, air, wavelength_nm) to the index relative to the air."""
+"""Kinds of water by the name in the scene file: functions of (rain, air, wavelength_nm), index relative to air."""
 
 
 def refractive_index(rain: Rain, air: Air, wavelength_nm: np.ndarray) -> np.ndarray:

@@ -13,7 +13,8 @@ def limb_darkening(wavelength_nm: np.ndarray) -> np.ndarray:
     Parameters
     ----------
     wavelength_nm : array_like, shape (n,)
-        Wavelengths [nm]. Between the table's rows (402 to 701 nm) coefficients run straight; outside, the end rows hold.
+        Wavelengths [nm]. Coefficients run straight between the table's rows, which reach from 374 to 812 nm; outside,
+        the end rows hold.
 
     Returns
     -------
