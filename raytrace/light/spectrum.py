@@ -79,7 +79,7 @@ def illumination(scene: Scene, wavelength_nm: np.ndarray) -> Illumination:
     joined by monotone cubics in wavelength. Air mass: F. Kasten, A. T. Young, Appl. Opt. 28, 4735 (1989).
 
     SPECTRL2 takes the air to be flat, so that skylight would vanish with the cosine of the zenith angle. For the
-    skylight alone that cosine is put at 1 over the air mass, which is the same while the sun is high (1 % at 15 deg)
+    skylight alone that cosine is put at 1 over the air mass, which is the same while the sun is high (to 1.5 % from 15 deg up)
     and leaves the horizon about 1 klx, as measured skies have.
     """
     sun = sun_place(scene)
