@@ -79,8 +79,8 @@ def illumination(scene: Scene, wavelength_nm: np.ndarray) -> Illumination:
     joined by monotone cubics in wavelength. Air mass: F. Kasten, A. T. Young, Appl. Opt. 28, 4735 (1989).
 
     SPECTRL2 takes the air to be flat, so that skylight would vanish with the cosine of the zenith angle. For the
-    skylight alone that cosine is put at 1 over the air mass, which is the same while the sun is high (to 1.5 % from 15 deg up)
-    and leaves the horizon about 1 klx, as measured skies have.
+    skylight alone that cosine is put at 1 over the air mass (ours), which is the same to 1.5 % from 15 deg of elevation
+    up, and leaves 1.1 klx with the sun on the horizon, where handbooks have 0.7 (from memory).
     """
     sun = sun_place(scene)
     if not 0.0 <= sun.elevation_deg <= 90.0:
