@@ -109,7 +109,9 @@ def make_lens(camera, antisolar_azimuth_deg: float) -> Lens:
         scale = 0.5 * min(width, height) / half_field
     else:
         scale = width / (2 * math.pi)
-    return Lens(camera.projection, width, height, scale, _rotation(azimuth, camera.elevation_deg, camera.roll_deg), half_field)
+    return Lens(
+        camera.projection, width, height, scale, _rotation(azimuth, camera.elevation_deg, camera.roll_deg), half_field
+    )
 
 
 def _rotation(azimuth_deg, elevation_deg, roll_deg):

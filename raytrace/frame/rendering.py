@@ -21,7 +21,9 @@ _STRIP_PIXELS = 131_072
 _DEVELOP_PIXELS = 65_536
 
 
-def render(scene, *, threads: int | None = None, cache: bool = True, progress: bool = False, layers: bool = False) -> Frame:
+def render(
+    scene, *, threads: int | None = None, cache: bool = True, progress: bool = False, layers: bool = False
+) -> Frame:
     """Render a scene to a frame.
 
     Parameters

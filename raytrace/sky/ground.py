@@ -13,20 +13,21 @@ import numpy as np
 
 from raytrace.jit import kernel
 from raytrace.sky.background import cloud_cover, sky_xyz
-from raytrace.sky.noise import gradient_noise, lattice_hash, octaves, smoothstep
-from raytrace.sky.terrain import Terrain, hill_height, woods
+from raytrace.sky.fields import field_at
+from raytrace.sky.noise import gradient_noise, octaves, smoothstep
+from raytrace.sky.terrain import Terrain, height_at, hill_height, woods
 
 _COVERS = {"none": 0, "plain": 1, "meadow": 2, "fields": 3, "forest": 4, "sea": 5}
 _SEA_INDEX = 1.339
 # Crops as linear sRGB reflectance: pasture, young grain, ripe grain, stubble, ploughed earth, hay meadow
 _CROPS = np.array(
     [
-        [0.075, 0.125, 0.032],
-        [0.060, 0.135, 0.030],
-        [0.250, 0.190, 0.075],
-        [0.300, 0.235, 0.120],
-        [0.120, 0.085, 0.055],
-        [0.130, 0.160, 0.050],
+        [0.075, 0.105, 0.036],
+        [0.070, 0.118, 0.034],
+        [0.215, 0.170, 0.085],
+        [0.240, 0.195, 0.110],
+        [0.115, 0.085, 0.060],
+        [0.110, 0.130, 0.048],
     ]
 )
 _LEAVES = (0.026, 0.048, 0.014)
@@ -49,32 +50,36 @@ class Cover(NamedTuple):
 
 
 @kernel
+def grain(x, y, seed, footprint):
+    """Fine unevenness of what grows, about -1 to 1: from tufts down to what a pixel can hold."""
+    total, height, width = 0.0, 0.42, 6.0
+    for k in range(8):
+        keep = 1.0 - footprint / width
+        if keep <= 0.0:
+            break
+        total += height * min(1.0, 2.0 * keep) * gradient_noise(x / width, y / width, 0.5, seed + np.uint64(k))
+        height *= 0.86
+        width *= 0.49
+    return total
+
+
+@kernel
 def field_crop(x, y, seed, footprint, crops, out):
-    """Patchwork of fields: cells round jittered points, a crop each, with hedges between. Reflectance into out (3,)."""
-    # long narrow fields, turned against the compass; bent a little so that no edge is ruled
-    u = (0.86 * x + 0.51 * y) / 210.0 + 0.12 * gradient_noise(x / 300.0, y / 300.0, 1.5, seed)
-    v = (-0.51 * x + 0.86 * y) / 130.0 + 0.12 * gradient_noise(x / 300.0, y / 300.0, 7.5, seed)
-    iu, iv = math.floor(u), math.floor(v)
-    best, second, cell = 1e9, 1e9, np.uint64(0)
-    for du in range(-1, 2):
-        for dv in range(-1, 2):
-            bits = lattice_hash(np.int64(iu) + du, np.int64(iv) + dv, 0, seed)
-            px = iu + du + 0.2 + 0.6 * np.float64(np.int64(bits & np.uint64(0xFFFF))) / 65536.0
-            py = iv + dv + 0.2 + 0.6 * np.float64(np.int64((bits >> np.uint64(16)) & np.uint64(0xFFFF))) / 65536.0
-            away = max(abs(u - px), abs(v - py))
-            if away < best:
-                second, best, cell = best, away, bits
-            elif away < second:
-                second = away
+    """Reflectance of the patchwork of fields and hedges at (x, y), into out (3,)."""
+    cell, edge, across = field_at(x, y, seed)
     crop = crops[np.int64((cell >> np.uint64(32)) % np.uint64(crops.shape[0]))]
-    lightness = 0.82 + 0.36 * np.float64(np.int64((cell >> np.uint64(40)) & np.uint64(0xFF))) / 255.0
-    # rows of the crop, and its unevenness
-    lightness *= 1.0 + 0.25 * octaves(x / 34.0, y / 34.0, 2.5, seed + np.uint64(40), 5, footprint / 34.0)
-    hedge_width = 0.018
-    hedge = 1.0 - smoothstep(hedge_width, hedge_width + 0.02 + 0.5 * footprint / 130.0, second - best)
-    hedge *= hedge_width / (hedge_width + 0.25 * footprint / 130.0)
+    lightness = 0.85 + 0.3 * np.float64(np.int64((cell >> np.uint64(40)) & np.uint64(0xFF))) / 255.0
+    patchy = octaves(x / 55.0, y / 55.0, 2.5, seed + np.uint64(40), 4, footprint / 55.0)
+    lightness *= 1.0 + 0.30 * patchy + 0.42 * grain(x, y, seed + np.uint64(60), footprint)
+    # wheel tracks, two every 24 m, where the pixel is fine enough to show them
+    track = abs((across / 24.0 - math.floor(across / 24.0)) * 24.0 - 12.0)
+    if footprint < 2.0 and abs(track - 1.0) < 0.35:
+        lightness *= 1.0 - 0.4 * (1.0 - 0.5 * footprint)
+    ragged = edge + 1.6 * grain(x, y, seed + np.uint64(80), max(footprint, 0.6))
+    hedge = 1.0 - smoothstep(2.0, 3.2 + 0.5 * footprint, ragged)
+    leaf = max(0.35, 0.8 + 0.8 * grain(x, y, seed + np.uint64(90), footprint))
     for c in range(3):
-        out[c] = crop[c] * lightness * (1.0 - hedge) + _LEAVES[c] * 0.9 * hedge
+        out[c] = crop[c] * max(lightness, 0.2) * (1.0 - hedge) + _LEAVES[c] * leaf * hedge
 
 
 @kernel
@@ -87,10 +92,11 @@ def reflectance(cover, land, x, y, footprint, out):
     if cover.kind == 3 and wood < 1.0:
         field_crop(x, y, cover.seed, footprint, cover.crops, out)
     elif cover.kind == 2 and wood < 1.0:
-        wide = octaves(x / 90.0, y / 90.0, 2.5, cover.seed, 7, footprint / 90.0)
+        wide = octaves(x / 90.0, y / 90.0, 2.5, cover.seed, 4, footprint / 90.0)
         tint = octaves(x / 400.0, y / 400.0, 5.5, cover.seed + np.uint64(9), 3, footprint / 400.0)
+        shade = max(0.2, 1.0 + 0.35 * wide + 0.42 * grain(x, y, cover.seed + np.uint64(60), footprint))
         for c in range(3):
-            out[c] = _MEADOW[c] * (1.0 + 0.45 * wide)
+            out[c] = _MEADOW[c] * shade
         out[0] *= 1.0 + 0.3 * tint
     else:
         out[0] = out[1] = out[2] = 0.0
@@ -104,7 +110,7 @@ def reflectance(cover, land, x, y, footprint, out):
 
 
 @kernel
-def land_xyz(cover, land, distance, azimuth, footprint, scratch, out):
+def land_xyz(cover, land, distance, azimuth, slope, footprint, scratch, out):
     """Radiance of the land as XYZ [cd/m2] into out (3,): Lambert's law under the sun and an even sky.
 
     Parameters
@@ -113,12 +119,24 @@ def land_xyz(cover, land, distance, azimuth, footprint, scratch, out):
         Level distance [m].
     azimuth : float
         [rad]
+    slope : float
+        Tangent of the line of sight's elevation.
     footprint : float
         Width over which the pixel averages [m].
     scratch : (3,) float64
     """
     x, y = distance * math.sin(azimuth), distance * math.cos(azimuth)
     wood = reflectance(cover, land, x, y, footprint, scratch)
+    if distance >= land.distance[0] and cover.kind > 1:
+        # what stands well above the bare ground is a tree or a hedge, dark at its foot
+        above = height_at(land, distance, slope) - hill_height(land, x, y, footprint)
+        tree = smoothstep(0.7, 1.6, above)
+        if tree > 0.0:
+            leaf = max(0.3, 1.0 + 0.9 * grain(x + above, y - above, cover.seed + np.uint64(90), 0.7 * footprint))
+            leaf *= 0.45 + 0.55 * smoothstep(0.5, 7.0, above)
+            for c in range(3):
+                scratch[c] += tree * (_LEAVES[c] * leaf - scratch[c])
+            wood = max(wood, tree)
     step = max(12.0, footprint)
     dzdx = (hill_height(land, x + step, y, footprint) - hill_height(land, x - step, y, footprint)) / (2.0 * step)
     dzdy = (hill_height(land, x, y + step, footprint) - hill_height(land, x, y - step, footprint)) / (2.0 * step)
@@ -199,7 +217,13 @@ def make_cover(ground, direct_xyz, diffuse_xyz, sun_vector) -> Cover:
 
 def mean_ground_xyz(cover: Cover) -> np.ndarray:
     """(3,) mean radiance of level ground as XYZ, for the light that rain gets from below [cd/m2]."""
-    mean = {0: np.zeros(3), 1: np.full(3, cover.grey), 2: np.array(_MEADOW), 4: np.array(_LEAVES), 5: 3 * np.array(_DEEP)}
+    mean = {
+        0: np.zeros(3),
+        1: np.full(3, cover.grey),
+        2: np.array(_MEADOW),
+        4: np.array(_LEAVES),
+        5: 3 * np.array(_DEEP),
+    }
     rgb = cover.gain * mean.get(cover.kind, _CROPS.mean(axis=0))
     lit = np.array(cover.sun_rgb) * max(cover.sun[2], 0.0) + np.array(cover.sky_rgb)
     return cover.to_xyz @ (rgb * lit)

@@ -96,7 +96,11 @@ def prepare_view(scene, light: Illumination, order_tables, phases, pixel_rad: fl
     betas = [drop_sizes(rain).extinction_per_km for rain in scene.rain]
     rain = make_curtains(scene, betas, sun_vector, haze, threads=threads)
     if plate_xyz is not None:
-        surround = sky._replace(zenith=0.0, uniform=float(plate_xyz[1]), xz=np.tile(plate_xyz[[0, 2]] / max(plate_xyz[1], 1e-9), (len(sky.xz), 1)))
+        surround = sky._replace(
+            zenith=0.0,
+            uniform=float(plate_xyz[1]),
+            xz=np.tile(plate_xyz[[0, 2]] / max(plate_xyz[1], 1e-9), (len(sky.xz), 1)),
+        )
         ground_xyz = None
     else:
         surround = sky

@@ -19,7 +19,7 @@ from raytrace.sky.noise import smoothstep
 # Nodes of the table of sunward optical depth (azimuth, level distance, height) and steps along each path
 _GRID = (96, 40, 28)
 _SUN_STEPS = 64
-VIEW_STEPS = 40
+VIEW_STEPS = 32
 
 # Columns of the array of curtains, one row a curtain
 EXTINCTION, NEAR, FAR, BOTTOM, TOP, EDGE, EDGE_TOP, AZIMUTH, HALF, EDGE_AZIMUTH = range(10)
@@ -203,7 +203,7 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
         return 1.0
     level = math.hypot(x, y)
     steps = max(2 * VIEW_STEPS // n, 8)
-    depth = 0.0
+    depth, clear = 0.0, 1.0
     for e in range(n - 1):
         step = (ends[e + 1] - ends[e]) / steps
         if step <= 0.0:
@@ -221,15 +221,17 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
             if passed <= 0.0:
                 continue
             # exact for a density that is constant over the step, so that the steps add up to 1 - exp(-depth)
-            taken = math.exp(-depth) * -math.expm1(-passed) / passed
+            depth += passed
+            onward = math.exp(-depth)
+            taken = (clear - onward) / passed
+            clear = onward
             for c in range(count):
                 if passes[c] > 0.0:
                     part = passes[c] * taken
                     skylit[c] += part
                     to_sun = sun_depth_at(rain, c, places[c], r, height)
                     sunlit[c] += part * math.exp(-to_sun - rain.haze * s)
-            depth += passed
-    return math.exp(-depth)
+    return clear
 
 
 def make_curtains(scene, extinction_per_km, sun_vector, haze_per_m: float, *, threads=None) -> Curtains:

@@ -97,7 +97,7 @@ def shade(view, directions, inside, plate, pixel, layers):
                     if cover.kind == 5:
                         sea_xyz(cover, sky, distance, azimuth, slope, footprint, scratch, a)
                     else:
-                        land_xyz(cover, land, distance, azimuth, footprint, scratch, a)
+                        land_xyz(cover, land, distance, azimuth, slope, footprint, scratch, a)
                     clear = math.exp(-rain.haze * straight)
                     distance_sum += straight
                     for c in range(3):

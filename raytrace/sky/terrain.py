@@ -13,7 +13,8 @@ from typing import NamedTuple
 import numpy as np
 
 from raytrace.jit import kernel, run_all
-from raytrace.sky.noise import octaves, smoothstep
+from raytrace.sky.fields import field_edge_m
+from raytrace.sky.noise import gradient_noise, octaves, smoothstep
 
 # 7/6 of the earth's mean radius: usual allowance for refraction in surveying; common practice, no source
 EFFECTIVE_EARTH_M = 6_371_000.0 * 7.0 / 6.0
@@ -29,6 +30,7 @@ class Terrain(NamedTuple):
     hills_from: float  # level distance where they rise [m]
     reaches: float  # level distance of the last ridge [m]
     wooded: float  # share of woods, 0 to 1
+    hedged: bool  # whether hedges stand between fields
     eye: float  # height of the camera [m]
     seed: np.uint64
     distance: np.ndarray  # (distances,) of the grid [m]
@@ -68,8 +70,14 @@ def surface_height(land, x, y, footprint):
     if land.wooded > 0.0:
         wood = woods(land, x, y, footprint)
         if wood > 0.0:
-            crowns = octaves(x / 26.0, y / 26.0, 0.5, land.seed + np.uint64(900), 2, footprint / 52.0)
-            height += wood * (13.0 + 7.0 * crowns)
+            crowns = octaves(x / 24.0, y / 24.0, 0.5, land.seed + np.uint64(900), 4, footprint / 48.0)
+            height += wood * (12.0 + 11.0 * crowns)
+    if land.hedged and footprint < 40.0:
+        edge = field_edge_m(x, y, land.seed)
+        if edge < 5.0:
+            trees = gradient_noise(x / 23.0, y / 23.0, 8.5, land.seed)
+            rough = octaves(x / 7.0, y / 7.0, 3.5, land.seed + np.uint64(950), 3, footprint / 14.0)
+            height += (2.2 + 9.0 * smoothstep(0.15, 0.5, trees)) * (1.0 + 0.7 * rough)
     return height
 
 
@@ -97,6 +105,12 @@ def plain_distance(eye, slope):
         return -1.0
     # the product form keeps its digits for steep lines
     return 2.0 * eye / (-slope + math.sqrt(inside))
+
+
+@kernel
+def height_at(land, distance, slope):
+    """Height above the plain at which a line of sight of that slope stands at a level distance [m]."""
+    return land.eye + distance * slope + distance * distance / (2.0 * EFFECTIVE_EARTH_M)
 
 
 @kernel
@@ -171,6 +185,7 @@ def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Ter
         hills_from=ground.hills_from_m,
         reaches=ground.reaches_m,
         wooded=0.0 if flat else wooded,
+        hedged=ground.cover == "fields" and not flat,
         eye=float(eye_m),
         seed=np.uint64(ground.seed),
         distance=distance,
@@ -178,5 +193,7 @@ def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Ter
     )
     if not flat:
         pieces = np.linspace(0, count + 1, 33).astype(int)
-        run_all(fill_slopes, [(land, int(a), int(b)) for a, b in zip(pieces[:-1], pieces[1:], strict=True)], threads=threads)
+        run_all(
+            fill_slopes, [(land, int(a), int(b)) for a, b in zip(pieces[:-1], pieces[1:], strict=True)], threads=threads
+        )
     return land
