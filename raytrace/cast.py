@@ -1,4 +1,4 @@
-"""The door to compiled code: makes type, order and finiteness of arrays right, once, so that each kernel compiles once."""
+"""The door to compiled code: makes type, order and finiteness of arrays right, so that each kernel compiles once."""
 
 from __future__ import annotations
 

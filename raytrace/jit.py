@@ -1,13 +1,13 @@
 """One door to numba: every kernel of the project is compiled through `kernel` and run through `run_all`.
 
 Why a door of our own: numba's compile cache looks only at the file of the function itself, so an edit in a kernel that
-is called from another file would go unnoticed, and it fails where no folder can be written. Here the machine code lies in
-a folder named by a hash of all sources of the package and numba's version, and where no folder can be written, the
+is called from another file would go unnoticed, and it fails where no folder can be written. Here the machine code lies
+in a folder named by a hash of all sources of the package and numba's version, and where no folder can be written, the
 kernels are compiled anew in each process.
 
-Kernels release the interpreter lock and are run by a thread pool of the standard library: no OpenMP, so forked and nested
-processes are safe, one kernel is one compilation, and the work is cut in fixed pieces whose order of summation does not
-depend on the number of threads.
+Kernels release the interpreter lock and are run by a thread pool of the standard library: no OpenMP, so forked and
+nested processes are safe, one kernel is one compilation, and the work is cut in fixed pieces whose order of summation
+does not depend on the number of threads.
 """
 
 from __future__ import annotations

@@ -1,8 +1,9 @@
-"""The one random stream of the project: a hash of counters, so that a number depends on where it is used and on nothing else.
+"""The one random stream of the project: a hash of counters, so that a number depends only on where it is used.
 
-SplitMix64 (Steele, Lea and Flood 2014, "Fast splittable pseudorandom number generators", OOPSLA, doi:10.1145/2660193.2660195)
-read as a function of its counter: the k-th output of a stream with state s is mix64(s + k * GOLDEN). The state of a stream
-is made from (seed, block, dimension) by the same hash, and the ray's number is the counter.
+SplitMix64 (Steele, Lea and Flood 2014, "Fast splittable pseudorandom number generators", OOPSLA,
+doi:10.1145/2660193.2660195) read as a function of its counter: the k-th output of a stream with state s is
+mix64(s + k * GOLDEN). The state of a stream is made from (seed, block, dimension) by the same hash, and the ray's
+number is the counter.
 """
 
 from __future__ import annotations

@@ -45,7 +45,7 @@ def render(
     Raises
     ------
     InputError
-        If the scene asks for what cannot be: the sun below the horizon, more memory than there is, a plate that is none.
+        If the scene asks for what cannot be: the sun below the horizon, more memory than there is, a bad plate.
     """
     from raytrace import __version__
     from raytrace.preflight import preflight

@@ -5,7 +5,7 @@ _WHERE = {
     "scattering_table": "scattering",
     "trace_sphere": "sphere",
 }
-__all__ = sorted(_WHERE)
+__all__ = ["ScatteringTable", "scattering_table", "trace_sphere"]
 
 
 def __getattr__(name):

@@ -22,7 +22,16 @@ from raytrace.optics.table import ScatteringTable
 FORMAT = "raytrace scattering table 1"
 SUFFIX = ".table"
 LIMIT_BYTES = 2 * 1024**3
-_ARRAYS = ("phase_sr", "standard_error_sr", "angle_edges_deg", "wavelength_nm", "index_n", "index_k", "left_over", "absorbed")
+_ARRAYS = (
+    "phase_sr",
+    "standard_error_sr",
+    "angle_edges_deg",
+    "wavelength_nm",
+    "index_n",
+    "index_k",
+    "left_over",
+    "absorbed",
+)
 _SOURCES = ("sphere.py", "sphere_kernels.py", "table.py", "../random_stream.py")
 
 
@@ -87,7 +96,9 @@ def load(key: str) -> ScatteringTable | None:
         index = arrays.pop("index_n") + 1j * arrays.pop("index_k")
         return ScatteringTable(**arrays, index=index, method=head["method"], rays=head["rays"], seed=head["seed"])
     except (OSError, ValueError, KeyError, TypeError, MemoryError) as problem:
-        warnings.warn(f"cache file {path.name} is left unused: {problem}; the table is traced anew", CacheWarning, stacklevel=2)
+        warnings.warn(
+            f"cache file {path.name} is left unused: {problem}; the table is traced anew", CacheWarning, stacklevel=2
+        )
         return None
 
 

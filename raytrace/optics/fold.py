@@ -1,15 +1,16 @@
 """The sun is a disc: the scattering table folded with its limb-darkened profile, on the sphere.
 
-A ring of the disc at distance rho from its centre lights the drop from directions whose scattering angle toward a fixed
-viewer runs from |theta - rho| to theta + rho. By the spherical law of cosines the share of the ring below the angle
-alpha is arccos[(cos alpha - cos theta cos rho) / (sin theta sin rho)] / pi, which gives the weight of each bin in closed
-form; only the sum over rings and over the width of the viewer's bin is numerical. Near 0 and 180 degrees and where
-cot theta matters this is not a convolution in one dimension.
+A ring of the disc at distance rho from its centre lights the drop from directions whose scattering angle toward a
+fixed viewer runs from |theta - rho| to theta + rho. By the spherical law of cosines the share of the ring below the
+angle alpha is arccos[(cos alpha - cos theta cos rho) / (sin theta sin rho)] / pi, which gives the weight of each bin in
+closed form; only the sum over rings and over the width of the viewer's bin is numerical. Near 0 and 180 degrees this is
+not a convolution in one dimension.
 """
 
 from __future__ import annotations
 
 import dataclasses
+import itertools
 import math
 
 import numpy as np
@@ -120,14 +121,14 @@ def disc_weights(angle_edges_deg, diameter_deg: float, powers: int, *, threads: 
     # on the disc dOmega is proportional to 2 mu dmu, with mu^2 = 1 - (sin rho / sin R)^2
     rho = np.arcsin(math.sin(radius) * np.sqrt(1 - mu**2))
     basis = np.array([2 * gauss * mu ** (q + 1) for q in range(powers)])
-    width = min(bins, int(math.ceil(2 * radius * bins / math.pi)) + 3)
+    width = min(bins, math.ceil(2 * radius * bins / math.pi) + 3)
     theta_nodes, theta_weights = np.polynomial.legendre.leggauss(_IN_BIN)
     start = np.empty(bins, dtype=np.int64)
     weights = np.zeros((powers, bins, width))
     pieces = np.linspace(0, bins, min(bins, 16) + 1).astype(int)
     tasks = [
         (int(a), int(b), edges, rho, basis, theta_nodes, theta_weights, start, weights)
-        for a, b in zip(pieces[:-1], pieces[1:], strict=True)
+        for a, b in itertools.pairwise(pieces)
     ]
     run_all(ring_weights, tasks, threads=threads)
     return start, weights
@@ -144,7 +145,9 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
     if not (np.isfinite(diameter_deg) and 0 <= diameter_deg <= 10):
         raise ValueError(f"diameter_deg={diameter_deg!r} given; 0 to 10 works")
     if table.disc_diameter_deg:
-        raise ValueError(f"a disc of {table.disc_diameter_deg} degrees is folded in already; start from the table without")
+        raise ValueError(
+            f"a disc of {table.disc_diameter_deg} degrees is folded in already; start from the table without"
+        )
     if diameter_deg == 0:
         return table
     if table.wavelength_nm is None:
@@ -163,6 +166,4 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
                 out[p, :, w] = folded
 
     run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
-    return dataclasses.replace(
-        table, phase_sr=phase, standard_error_sr=error, disc_diameter_deg=float(diameter_deg)
-    )
+    return dataclasses.replace(table, phase_sr=phase, standard_error_sr=error, disc_diameter_deg=float(diameter_deg))

@@ -57,7 +57,9 @@ def scattering_table(
 
     from raytrace.optics.sphere import trace_sphere
 
-    with tqdm(total=arguments["index"].size, desc="tracing drops", unit="wavelength", disable=not progress, file=sys.stderr) as bar:
+    with tqdm(
+        total=arguments["index"].size, desc="tracing drops", unit="wavelength", disable=not progress, file=sys.stderr
+    ) as bar:
         table = trace_sphere(**arguments, threads=threads, on_done=bar.update)
     if use_cache:
         cache.store(key, table)

@@ -31,10 +31,10 @@ def trace_sphere(
 ) -> ScatteringTable:
     """Trace rays of unpolarised parallel light through a sphere.
 
-    Rays fall on the sphere's disc, one in each of many rings of equal area (jittered and stratified in b²). At every hit
-    of the surface the ray deposits what leaves, weighted by Fresnel's formulas for each polarisation, in the histogram
-    of its order, and what is reflected goes on: p = 0 external reflection, 1 straight through, 2 the primary bow, and
-    so on. Directions after van de Hulst (1957), *Light Scattering by Small Particles*, section 12.21.
+    Rays fall on the sphere's disc, one in each of many rings of equal area (jittered and stratified in b²). At every
+    hit of the surface the ray deposits what leaves, weighted by Fresnel's formulas for each polarisation, in the
+    histogram of its order, and what is reflected goes on: p = 0 external reflection, 1 straight through, 2 the primary
+    bow, and so on. Directions after van de Hulst (1957), *Light Scattering by Small Particles*, section 12.21.
 
     Parameters
     ----------

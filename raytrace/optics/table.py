@@ -14,8 +14,8 @@ class ScatteringTable:
     Attributes
     ----------
     phase_sr : (paths, 2, n_wavelength, n_angle) float64
-        Power per steradian that leaves in order p and polarisation (0 perpendicular to the scattering plane, 1 parallel),
-        over the power that the drop's cross-section intercepts; mean over each bin [sr⁻¹].
+        Power per steradian that leaves in order p and polarisation (0 perpendicular to the scattering plane, 1
+        parallel), over the power that the drop's cross-section intercepts; mean over each bin [sr⁻¹].
     standard_error_sr : same shape
         Standard error of `phase_sr` from independent blocks of rays [sr⁻¹].
     angle_edges_deg : (n_angle + 1,) float64

@@ -43,8 +43,8 @@ class Background(NamedTuple):
 def takagi_1990(luminance_cd_m2: np.ndarray) -> np.ndarray:
     """Correlated colour temperature of a patch of clear sky from its luminance [K].
 
-    Takagi, Miki, Natayama and Tanaka (1990), quoted as T = 6500 + 1.1985e8 / L^1.2 with L in cd/m2; the numbers are from
-    memory. Held within the CIE daylight locus's range of 4000 to 25000 K.
+    Takagi, Miki, Natayama and Tanaka (1990), quoted as T = 6500 + 1.1985e8 / L^1.2 with L in cd/m2; the numbers are
+    from memory. Held within the CIE daylight locus's range of 4000 to 25000 K.
     """
     return np.clip(6500.0 + 1.1985e8 / np.maximum(luminance_cd_m2, 1.0) ** 1.2, 4000.0, 25_000.0)
 

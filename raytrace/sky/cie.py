@@ -1,4 +1,4 @@
-"""CIE standard general sky, ISO 15469:2004: how luminance is spread over the sky, for 15 types from overcast to clear."""
+"""CIE standard general sky, ISO 15469:2004: how luminance is spread over the sky, 15 types from overcast to clear."""
 
 from __future__ import annotations
 

@@ -1,7 +1,7 @@
-"""What covers the land, and how it looks under sun and sky: Lambert's law with invented textures, Fresnel's for the sea.
+"""What covers the land, and how it looks under sun and sky: Lambert's law with invented textures, waves for the sea.
 
-The reflectances here are scenery, not measurement: linear sRGB triples of our own choice, whose luminous part can be set
-by the scene's `albedo`.
+The reflectances here are scenery, not measurement: linear sRGB triples of our own choice, whose luminous part can be
+set by the scene's `albedo`.
 """
 
 from __future__ import annotations

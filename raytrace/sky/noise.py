@@ -1,7 +1,8 @@
 """Seeded, seamless texture: gradient noise on a lattice of hashed gradients, and sums of octaves of it.
 
-Gradient noise after Perlin (1985), "An image synthesizer", Computer Graphics 19(3), with the fifth-degree fade of Perlin
-(2002), "Improving noise". The hash is the project's random stream. Texture here is invented scenery, not measurement.
+Gradient noise after Perlin (1985), "An image synthesizer", Computer Graphics 19(3), with the fifth-degree fade of
+Perlin (2002), "Improving noise". The hash is the project's random stream. Texture here is invented scenery, not
+measurement.
 """
 
 from __future__ import annotations

@@ -1,4 +1,4 @@
-"""Curtains of rain: where drops are, how they dim what is behind, and how much sunlight reaches the eye after one scattering.
+"""Curtains of rain: where drops are, how they dim what is behind, and how much sunlight they scatter to the eye.
 
 A curtain fills a sector of air between two level distances, two heights and two azimuths, with soft edges. Along a line
 of sight the extinction adds up over curtains; sunlight is dimmed on its way in by the same curtains, then scattered

@@ -78,7 +78,7 @@ def shade(view, directions, inside, plate, pixel, layers):
             reach = _FAR_AWAY
             if part == 1:
                 distance_sum = 0.0
-                # airlight is what the air would look like if it had no end: the sky at the horizon behind (Koschmieder 1924)
+                # airlight: what air without an end would look like, the sky at the horizon behind (Koschmieder 1924)
                 hx, hy, hz = x / level * 0.99985, y / level * 0.99985, 0.0175
                 opacity = cloud_cover(sky, hx, hy, hz, a)
                 sky_xyz(sky, hx, hy, hz, airlight)

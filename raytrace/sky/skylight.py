@@ -1,12 +1,13 @@
 """Skylight that the drops scatter into the view: the surround seen through the phase function of a drop.
 
-The surround (sky, cloud, ground) is sampled in cells of equal solid angle and folded with the drop's total phase function.
-The weights of each view are normalised to one, since a drop absorbs next to nothing: in a uniform surround the rain is
-invisible, as it must be.
+The surround (sky, cloud, ground) is sampled in cells of equal solid angle and folded with the drop's total phase
+function. The weights of each view are normalised to one, since a drop absorbs next to nothing: in a uniform surround
+the rain is invisible, as it must be.
 """
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -36,7 +37,7 @@ def fill_surround(sky, ground_xyz, directions, out):
 
 @kernel
 def fold_surround(first, last, views, directions, surround, phase, out):
-    """Surround folded with a phase function given in equal bins of the angle, for views first to last, into out (n, 3)."""
+    """Surround folded with a phase function in equal bins of the angle, for views first to last, into out (n, 3)."""
     bins = phase.size
     for i in range(first, last):
         total = 0.0
@@ -106,7 +107,7 @@ def surround_grid(sky, ground_xyz, phases, *, threads=None) -> np.ndarray:
     tasks = [
         (int(a), int(b), views, directions, surround, np.ascontiguousarray(phase), out[c])
         for c, phase in enumerate(phases)
-        for a, b in zip(pieces[:-1], pieces[1:], strict=True)
+        for a, b in itertools.pairwise(pieces)
     ]
     run_all(fold_surround, tasks, threads=threads)
     return out.reshape(len(phases), *VIEWS, 3)

@@ -7,6 +7,7 @@ the ground. One search a pixel, whatever the projection. The earth is round and 
 
 from __future__ import annotations
 
+import itertools
 import math
 from typing import NamedTuple
 
@@ -193,7 +194,5 @@ def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Ter
     )
     if not flat:
         pieces = np.linspace(0, count + 1, 33).astype(int)
-        run_all(
-            fill_slopes, [(land, int(a), int(b)) for a, b in zip(pieces[:-1], pieces[1:], strict=True)], threads=threads
-        )
+        run_all(fill_slopes, [(land, int(a), int(b)) for a, b in itertools.pairwise(pieces)], threads=threads)
     return land
