@@ -60,7 +60,7 @@ def render(
         table = scattering_table(scene, curtain, threads=threads, use_cache=cache, progress=progress)
         rays += table.rays * wavelength.size
         phases.append(_mean_phase(table, light))
-        tables.append(order_xyz(table.with_sun_disc(scene.sun.disc_diameter_deg, threads=threads), light.direct_normal))
+        tables.append(order_xyz(table, light.direct_normal, scene.sun.disc_diameter_deg, threads=threads))
         del table
     lens = make_lens(scene.camera, antisolar(light.sun)[0])
     plate = _plate(scene, lens) if scene.sky.model == "plate" else None

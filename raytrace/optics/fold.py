@@ -17,11 +17,12 @@ import numpy as np
 
 from raytrace import cast
 from raytrace.jit import kernel, run_all
+from raytrace.light.disc import limb_darkening
 from raytrace.optics.table import ScatteringTable
 
 # Gauss-Legendre nodes in mu = cos(angle from the disc's normal) over the disc, and over the width of a viewer's bin
 _RINGS = 24
-_IN_BIN = 4
+_IN_BIN = 3
 
 
 @kernel
@@ -77,30 +78,25 @@ def ring_weights(first, last, edges, rho, basis, theta_nodes, theta_weights, sta
 
 
 @kernel
-def apply_weights(values, start, weights, squares, out):
-    """out[row, i] = sum over j of weights[i, j] values[row, start[i] + j]; with squares, root of the sum of squares.
+def apply_weights(values, start, weights, out):
+    """out[i, row] = sum over j of weights[i, j] values[start[i] + j, row].
+
+    Rows lie innermost, so that the sum over j runs side by side for all of them, each in its own order.
 
     Parameters
     ----------
-    values, out : (rows, bins) float64
+    values, out : (bins, rows) float64
     start : (bins,) int64
     weights : (bins, width) float64
-    squares : bool
     """
-    rows, bins = values.shape
-    width = weights.shape[1]
-    for r in range(rows):
-        for i in range(bins):
-            total = 0.0
-            j0 = start[i]
-            if squares:
-                for j in range(width):
-                    total += (weights[i, j] * values[r, j0 + j]) ** 2
-                out[r, i] = math.sqrt(total)
-            else:
-                for j in range(width):
-                    total += weights[i, j] * values[r, j0 + j]
-                out[r, i] = total
+    bins, rows = values.shape
+    for i in range(bins):
+        for r in range(rows):
+            out[i, r] = 0.0
+        for j in range(weights.shape[1]):
+            w = weights[i, j]
+            for r in range(rows):
+                out[i, r] += w * values[start[i] + j, r]
 
 
 def disc_weights(angle_edges_deg, diameter_deg: float, powers: int, *, threads: int | None = None):
@@ -140,8 +136,6 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
     The limb darkening is Neckel and Labs (1994), wavelength by wavelength. The standard error is propagated as if the
     bins were independent; stratified rays make neighbours lean against each other, so it is on the safe side.
     """
-    from raytrace.light.disc import limb_darkening
-
     if not (np.isfinite(diameter_deg) and 0 <= diameter_deg <= 10):
         raise ValueError(f"diameter_deg={diameter_deg!r} given; 0 to 10 works")
     if table.disc_diameter_deg:
@@ -159,11 +153,52 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
     def one_wavelength(w):
         weights = np.tensordot(profile[w], basis, axes=1)
         weights /= weights.sum(axis=1, keepdims=True)
-        for p in range(table.paths):
-            for values, out, squares in ((table.phase_sr, phase, False), (table.standard_error_sr, error, True)):
-                folded = np.empty_like(values[p, :, w])
-                apply_weights(np.ascontiguousarray(values[p, :, w]), start, weights, squares, folded)
-                out[p, :, w] = folded
+        for values, factors, out in (
+            (table.phase_sr[:, :, w], weights, phase),
+            (table.standard_error_sr[:, :, w] ** 2, weights**2, error),
+        ):
+            rows = np.ascontiguousarray(values.reshape(-1, values.shape[-1]).T)
+            folded = np.empty_like(rows)
+            apply_weights(rows, start, factors, folded)
+            out[:, :, w] = folded.T.reshape(values.shape)
 
     run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
+    np.sqrt(error, out=error)
     return dataclasses.replace(table, phase_sr=phase, standard_error_sr=error, disc_diameter_deg=float(diameter_deg))
+
+
+def project_with_sun_disc(
+    table: ScatteringTable, spectral_weights: np.ndarray, diameter_deg: float, *, threads: int | None = None
+) -> np.ndarray:
+    """Weighted sums over wavelength and polarisation of the table folded with the sun's disc.
+
+    The same as `table.with_sun_disc(diameter_deg)` summed afterwards, but summed first: the limb darkening is a sum of
+    powers of mu with a coefficient for each wavelength, so few rows are left to fold.
+
+    Parameters
+    ----------
+    table : ScatteringTable
+        For parallel light.
+    spectral_weights : (n_wavelength, n_channel) array
+    diameter_deg : float
+        0 for a point [deg].
+
+    Returns
+    -------
+    (paths, n_angle, n_channel) float64
+    """
+    both = table.phase_sr.sum(axis=1)
+    if diameter_deg == 0:
+        return np.ascontiguousarray(np.einsum("pwa,wc->pac", both, spectral_weights, optimize=True))
+    profile = limb_darkening(table.wavelength_nm)
+    powers = profile.shape[1]
+    start, basis = disc_weights(table.angle_edges_deg, diameter_deg, powers, threads=threads)
+    mean = profile @ (2.0 / (np.arange(powers) + 2.0))
+    out = np.zeros((table.angle_deg.size, table.paths, spectral_weights.shape[1]))
+    folded = np.empty((table.angle_deg.size, table.paths * spectral_weights.shape[1]))
+    for power in range(powers):
+        weights = spectral_weights * (profile[:, power] / mean)[:, None]
+        rows = np.einsum("pwa,wc->apc", both, weights, optimize=True)
+        apply_weights(np.ascontiguousarray(rows.reshape(folded.shape)), start, basis[power], folded)
+        out += folded.reshape(out.shape)
+    return np.ascontiguousarray(np.moveaxis(out, 1, 0))

@@ -12,6 +12,7 @@ from raytrace.drops.sizes import drop_sizes
 from raytrace.jit import run_all
 from raytrace.light.spectrum import Illumination
 from raytrace.light.sun import direction
+from raytrace.optics.fold import project_with_sun_disc
 from raytrace.optics.table import ScatteringTable
 from raytrace.sky.background import make_background
 from raytrace.sky.ground import make_cover, mean_ground_xyz
@@ -46,15 +47,19 @@ def with_sky_illuminance(scene, light: Illumination) -> Illumination:
     return light._replace(**changes) if hasattr(light, "_replace") else dataclasses.replace(light, **changes)
 
 
-def order_xyz(table: ScatteringTable, direct_normal: np.ndarray) -> np.ndarray:
-    """Radiance of each order under sunlight, per unit of sunlit rain.
+def order_xyz(
+    table: ScatteringTable, direct_normal: np.ndarray, disc_diameter_deg: float, *, threads=None
+) -> np.ndarray:
+    """Radiance of each order under the sun's disc, per unit of sunlit rain.
 
     Parameters
     ----------
     table : ScatteringTable
-        With the sun's disc folded in.
+        For parallel light.
     direct_normal : (n_wavelength,) array
         Direct normal irradiance [W m-2 nm-1].
+    disc_diameter_deg : float
+        Diameter of the sun's disc [deg].
 
     Returns
     -------
@@ -62,8 +67,7 @@ def order_xyz(table: ScatteringTable, direct_normal: np.ndarray) -> np.ndarray:
         XYZ [cd/m2].
     """
     weights = direct_normal[:, None] * colour.xyz_weights(table.wavelength_nm)
-    both = table.phase_sr[:, 0] + table.phase_sr[:, 1]
-    return np.ascontiguousarray(np.moveaxis(np.tensordot(weights.T, both, axes=(1, 1)), 0, -1))
+    return project_with_sun_disc(table, weights, disc_diameter_deg, threads=threads)
 
 
 def prepare_view(scene, light: Illumination, order_tables, phases, pixel_rad: float, plate_xyz=None, *, threads=None):
