@@ -1,0 +1,45 @@
+"""Small scenes and views for the tests of sky, camera and frame."""
+
+import math
+
+import numpy as np
+
+from raytrace.light.sun import direction
+from raytrace.scene.model import Air, Camera, Ground, Optics, Rain, Scene, Sky, Sun
+
+# Light enough for a test: 21 wavelengths, 0.1 deg bins, stratified rays
+FAST_OPTICS = {"rays": 20_000, "bins": 1_800, "wavelength_step_nm": 20.0}
+# A curtain all round the eye, hard at its edges unless said otherwise
+HARD = {"edge_m": 0.0, "edge_top_m": 0.0, "edge_deg": 0.0}
+
+
+def make_scene(sun=(20.0, 250.0), *, rain=None, sky=None, ground=None, camera=None, optics=None, air=None, disc=0.533):
+    """A scene with the sun at (elevation, azimuth) [deg]; every table is a dict of keys, rain also a list of them."""
+    rain = rain if isinstance(rain, list) else [rain or {}]
+    return Scene(
+        sun=Sun(elevation_deg=float(sun[0]), azimuth_deg=float(sun[1]), disc_diameter_deg=disc),
+        air=Air(**(air or {})),
+        rain=tuple(Rain(**keys) for keys in rain),
+        optics=Optics(**{**FAST_OPTICS, **(optics or {})}),
+        sky=Sky(**(sky or {})),
+        ground=Ground(**(ground or {"cover": "none"})),
+        camera=Camera(**{"width_px": 48, "height_px": 32, **(camera or {})}),
+    )
+
+
+def around(centre, radius_deg, turn_deg):
+    """Directions on a circle round a point of the sky: (n, 3) for (azimuth, elevation), its radius and n turns [deg].
+
+    Turn 0 is the circle's top, 90 its right-hand side seen from inside.
+    """
+    centre = direction(*centre)
+    right = np.cross(centre, [0.0, 0.0, 1.0])
+    right /= np.linalg.norm(right)
+    up = np.cross(right, centre)
+    radius, turn = np.radians(radius_deg), np.radians(np.atleast_1d(turn_deg))[:, None]
+    return math.cos(radius) * centre + math.sin(radius) * (np.cos(turn) * up + np.sin(turn) * right)
+
+
+def angle_deg(a, b):
+    """Angle between unit vectors (..., 3), good for small ones too [deg]."""
+    return np.degrees(2 * np.arcsin(np.clip(np.linalg.norm(np.asarray(a) - b, axis=-1) / 2, 0, 1)))
