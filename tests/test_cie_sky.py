@@ -4,12 +4,12 @@ import math
 
 import numpy as np
 import pytest
+from skies import make_scene
 
 from raytrace.light.spectrum import illumination
 from raytrace.light.sun import direction
 from raytrace.sky.background import make_background, sky_xyz
 from raytrace.sky.cie import gradation, horizontal_integral, indicatrix, relative_luminance, sky_type
-from skies import make_scene
 
 # ISO 15469:2004, table 1, as five independent codes quote it: a, b, c, d, e of types 1 to 15.
 TABLE = """

@@ -6,11 +6,11 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from skies import angle_deg
 
 from raytrace.camera.lens import PROJECTIONS, direction_pixels, make_lens, pixel_directions, row_directions
 from raytrace.light.sun import direction
 from raytrace.scene.model import Camera
-from skies import angle_deg
 
 
 def lens(projection="perspective", *, antisolar=70.0, **keys):
