@@ -176,3 +176,21 @@ def row_directions(lens: Lens, first_row: int, last_row: int):
     x, y = np.meshgrid(np.arange(lens.width_px) + 0.5, np.arange(first_row, last_row) + 0.5)
     directions, inside = pixel_directions(lens, x.ravel(), y.ravel())
     return np.ascontiguousarray(directions), inside
+
+
+def azimuth_span(lens: Lens) -> tuple[float, float]:
+    """Azimuths that the picture holds: the first one, clockwise, and the width of the span [rad]."""
+    x, y = np.meshgrid(np.linspace(0, lens.width_px, 65), np.linspace(0, lens.height_px, 65))
+    directions, inside = pixel_directions(lens, x.ravel(), y.ravel())
+    directions = directions[inside]
+    # with the zenith or the nadir in or near the picture every azimuth is; the samples lie up to a few degrees apart
+    if len(directions) < 2 or np.abs(directions[:, 2]).max() > math.cos(math.radians(12.0)):
+        return 0.0, 2 * math.pi
+    azimuth = np.sort(np.arctan2(directions[:, 0], directions[:, 1]))
+    gaps = np.diff(azimuth, append=azimuth[0] + 2 * math.pi)
+    widest = int(gaps.argmax())
+    margin = math.radians(8.0)
+    width = 2 * math.pi - gaps[widest] + 2 * margin
+    if width >= 2 * math.pi:
+        return 0.0, 2 * math.pi
+    return float(azimuth[(widest + 1) % len(azimuth)]) - margin, float(width)

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import sys
 import time
+from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
 from raytrace import colour
 from raytrace.camera import develop
-from raytrace.camera.lens import make_lens, row_directions
+from raytrace.camera.lens import azimuth_span, make_lens, row_directions
 from raytrace.frame.frame import Frame
 from raytrace.jit import run_all
 from raytrace.light.spectrum import illumination
@@ -54,18 +55,24 @@ def render(
     start = time.perf_counter()
     preflight(scene, layers=layers)
     wavelength = wavelengths_nm(scene.optics)
-    light = with_sky_illuminance(scene, illumination(scene, wavelength))
     tables, phases, rays = [], [], 0
+    # the spectrum's libraries take a second to load, which the first table's tracing or reading can overlap
+    with ThreadPoolExecutor(1) as pool:
+        spectrum = pool.submit(illumination, scene, wavelength)
+        table = scattering_table(scene, 0, threads=threads, use_cache=cache, progress=progress)
+        light = with_sky_illuminance(scene, spectrum.result())
     for curtain in range(len(scene.rain)):
-        table = scattering_table(scene, curtain, threads=threads, use_cache=cache, progress=progress)
+        if curtain:
+            table = scattering_table(scene, curtain, threads=threads, use_cache=cache, progress=progress)
         rays += table.rays * wavelength.size
         phases.append(_mean_phase(table, light))
         tables.append(order_xyz(table, light.direct_normal, scene.sun.disc_diameter_deg, threads=threads))
-        del table
     lens = make_lens(scene.camera, antisolar(light.sun)[0])
     plate = _plate(scene, lens) if scene.sky.model == "plate" else None
     plate_mean = None if plate is None else plate.mean(axis=(0, 1), dtype=np.float64)
-    view = prepare_view(scene, light, tables, phases, lens.pixel_rad, plate_mean, threads=threads)
+    view = prepare_view(
+        scene, light, tables, phases, lens.pixel_rad, plate_mean, span=azimuth_span(lens), threads=threads
+    )
     xyz, inside, kept = _radiance(view, lens, plate, scene.optics.paths, layers, threads, progress)
     exposure = _exposure(scene.camera, xyz, inside)
     sun_xyz = light.direct_normal @ colour.xyz_weights(wavelength)

@@ -75,9 +75,11 @@ def field_crop(x, y, seed, footprint, crops, out):
     track = abs((across / 24.0 - math.floor(across / 24.0)) * 24.0 - 12.0)
     if footprint < 2.0 and abs(track - 1.0) < 0.35:
         lightness *= 1.0 - 0.4 * (1.0 - 0.5 * footprint)
-    ragged = edge + 1.6 * grain(x, y, seed + np.uint64(80), max(footprint, 0.6))
-    hedge = 1.0 - smoothstep(2.0, 3.2 + 0.5 * footprint, ragged)
-    leaf = max(0.35, 0.8 + 0.8 * grain(x, y, seed + np.uint64(90), footprint))
+    hedge, leaf = 0.0, 0.0
+    if edge < 6.0 + 0.5 * footprint:
+        ragged = edge + 1.6 * grain(x, y, seed + np.uint64(80), max(footprint, 0.6))
+        hedge = 1.0 - smoothstep(2.0, 3.2 + 0.5 * footprint, ragged)
+        leaf = max(0.35, 0.8 + 0.8 * grain(x, y, seed + np.uint64(90), footprint))
     for c in range(3):
         out[c] = crop[c] * max(lightness, 0.2) * (1.0 - hedge) + _LEAVES[c] * leaf * hedge
 
@@ -127,9 +129,10 @@ def land_xyz(cover, land, distance, azimuth, slope, footprint, scratch, out):
     """
     x, y = distance * math.sin(azimuth), distance * math.cos(azimuth)
     wood = reflectance(cover, land, x, y, footprint, scratch)
+    bare = hill_height(land, x, y, footprint)
     if distance >= land.distance[0] and cover.kind > 1:
         # what stands well above the bare ground is a tree or a hedge, dark at its foot
-        above = height_at(land, distance, slope) - hill_height(land, x, y, footprint)
+        above = height_at(land, distance, slope) - bare
         tree = smoothstep(0.7, 1.6, above)
         if tree > 0.0:
             leaf = max(0.3, 1.0 + 0.9 * grain(x + above, y - above, cover.seed + np.uint64(90), 0.7 * footprint))
@@ -138,8 +141,8 @@ def land_xyz(cover, land, distance, azimuth, slope, footprint, scratch, out):
                 scratch[c] += tree * (_LEAVES[c] * leaf - scratch[c])
             wood = max(wood, tree)
     step = max(12.0, footprint)
-    dzdx = (hill_height(land, x + step, y, footprint) - hill_height(land, x - step, y, footprint)) / (2.0 * step)
-    dzdy = (hill_height(land, x, y + step, footprint) - hill_height(land, x, y - step, footprint)) / (2.0 * step)
+    dzdx = (hill_height(land, x + step, y, footprint) - bare) / step
+    dzdy = (hill_height(land, x, y + step, footprint) - bare) / step
     norm = 1.0 / math.sqrt(1.0 + dzdx * dzdx + dzdy * dzdy)
     cosine = max(0.0, (-dzdx * cover.sun[0] - dzdy * cover.sun[1] + cover.sun[2]) * norm)
     # crowns and stalks stand upright: seen from the sun's side they show more lit sides than level ground would

@@ -70,7 +70,17 @@ def order_xyz(
     return project_with_sun_disc(table, weights, disc_diameter_deg, threads=threads)
 
 
-def prepare_view(scene, light: Illumination, order_tables, phases, pixel_rad: float, plate_xyz=None, *, threads=None):
+def prepare_view(
+    scene,
+    light: Illumination,
+    order_tables,
+    phases,
+    pixel_rad: float,
+    plate_xyz=None,
+    *,
+    span=(0.0, 2 * math.pi),
+    threads=None,
+) -> View:
     """Everything that the kernel of the sky needs, from the scene.
 
     Parameters
@@ -86,6 +96,8 @@ def prepare_view(scene, light: Illumination, order_tables, phases, pixel_rad: fl
         Angular width of a pixel [rad].
     plate_xyz : (3,) array, optional
         Mean XYZ of the background picture, where there is one [cd/m2].
+    span : (float, float)
+        First azimuth that will be looked at, and the width of what will be [rad].
 
     Returns
     -------
@@ -115,7 +127,7 @@ def prepare_view(scene, light: Illumination, order_tables, phases, pixel_rad: fl
     sun_xyz = direct / (math.pi * radius**2) if drawn else np.zeros(3)
     return View(
         sky=sky,
-        land=make_terrain(scene.ground, scene.camera.height_m, pixel_rad, threads=threads),
+        land=make_terrain(scene.ground, scene.camera.height_m, pixel_rad, span, threads=threads),
         cover=cover,
         rain=rain,
         skylight=skylight,

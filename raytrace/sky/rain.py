@@ -17,54 +17,48 @@ from raytrace.jit import kernel, run_all
 from raytrace.sky.noise import smoothstep
 
 # Nodes of the table of sunward optical depth (azimuth, level distance, height) and steps along each path
-_GRID = (96, 40, 28)
-_SUN_STEPS = 64
-VIEW_STEPS = 32
+_GRID = (96, 32, 20)
+_SUN_STEPS = 48
+VIEW_STEPS = 24
 
-# Columns of the array of curtains, one row a curtain
+# Columns of the array of curtains, one row a curtain; those from OUTER_NEAR on follow from the ones before
 EXTINCTION, NEAR, FAR, BOTTOM, TOP, EDGE, EDGE_TOP, AZIMUTH, HALF, EDGE_AZIMUTH = range(10)
+OUTER_NEAR, OUTER_FAR, OUTER_BOTTOM, OUTER_TOP, PER_METRE_OUT, PER_METRE_UP = range(10, 16)
 
 
 class Curtains(NamedTuple):
     """State of all curtains as kernels take it."""
 
-    shape: np.ndarray  # (curtains, 10) extinction [1/m], limits [m], azimuth of the middle, half width, edge [rad]
+    shape: np.ndarray  # (curtains, 16) extinction [1/m], limits [m], azimuth of the middle, half width, edge [rad] ...
     sun: tuple  # unit vector to the sun
     sun_depth: np.ndarray  # (curtains, *_GRID) optical depth from a point of the curtain to the sun
     haze: float  # extinction of the air along the view [1/m]
 
 
 @kernel
-def azimuth_window(curtain, x, y):
-    """Share of the curtain's density left by its azimuth limits in the level direction (x, y)."""
-    half, edge = curtain[HALF], curtain[EDGE_AZIMUTH]
+def azimuth_window(shape, c, x, y):
+    """Share of curtain c's density left by its azimuth limits in the level direction (x, y)."""
+    half, edge = shape[c, HALF], shape[c, EDGE_AZIMUTH]
     if half >= math.pi - 1e-9:
         return 1.0
     level = math.hypot(x, y)
     if level < 1e-12:
         return 0.0
-    cosine = (x * math.sin(curtain[AZIMUTH]) + y * math.cos(curtain[AZIMUTH])) / level
+    cosine = (x * math.sin(shape[c, AZIMUTH]) + y * math.cos(shape[c, AZIMUTH])) / level
     away = math.acos(min(1.0, max(-1.0, cosine)))
     return 1.0 - smoothstep(half - 0.5 * edge, half + 0.5 * edge, away)
 
 
 @kernel
-def level_window(curtain, r, z):
-    """Share of the density left by the limits of distance and height."""
-    e, t = 0.5 * curtain[EDGE], 0.5 * curtain[EDGE_TOP]
-    density = smoothstep(curtain[NEAR] - e, curtain[NEAR] + e, r)
-    density *= 1.0 - smoothstep(curtain[FAR] - e, curtain[FAR] + e, r)
+def level_window(shape, c, r, z):
+    """Share of curtain c's density left by its limits of distance and height."""
+    e, t = 0.5 * shape[c, EDGE], 0.5 * shape[c, EDGE_TOP]
+    density = smoothstep(shape[c, NEAR] - e, shape[c, NEAR] + e, r)
+    density *= 1.0 - smoothstep(shape[c, FAR] - e, shape[c, FAR] + e, r)
     if density > 0.0:
-        density *= smoothstep(curtain[BOTTOM] - t, curtain[BOTTOM] + t, z)
-        density *= 1.0 - smoothstep(curtain[TOP] - t, curtain[TOP] + t, z)
+        density *= smoothstep(shape[c, BOTTOM] - t, shape[c, BOTTOM] + t, z)
+        density *= 1.0 - smoothstep(shape[c, TOP] - t, shape[c, TOP] + t, z)
     return density
-
-
-@kernel
-def extent(curtain):
-    """Outer limits with their soft edges: least and largest level distance, least and largest height."""
-    e, t = 0.5 * curtain[EDGE], 0.5 * curtain[EDGE_TOP]
-    return max(curtain[NEAR] - e, 0.0), curtain[FAR] + e, curtain[BOTTOM] - t, curtain[TOP] + t
 
 
 @kernel
@@ -72,8 +66,7 @@ def depth_to_sun(shape, sun, x, y, z):
     """Optical depth from a point to the sun through all curtains (midpoint rule up to the last curtain's edge)."""
     far, top = 0.0, -1e30
     for c in range(shape.shape[0]):
-        _, f, _, t = extent(shape[c])
-        far, top = max(far, f), max(top, t)
+        far, top = max(far, shape[c, OUTER_FAR]), max(top, shape[c, OUTER_TOP])
     # path until it is above every curtain or outside the widest circle
     level2 = sun[0] * sun[0] + sun[1] * sun[1]
     along = x * sun[0] + y * sun[1]
@@ -91,16 +84,16 @@ def depth_to_sun(shape, sun, x, y, z):
         px, py, pz = x + s * sun[0], y + s * sun[1], z + s * sun[2]
         r = math.hypot(px, py)
         for c in range(shape.shape[0]):
-            density = level_window(shape[c], r, pz)
+            density = level_window(shape, c, r, pz)
             if density > 0.0:
-                total += shape[c, EXTINCTION] * density * azimuth_window(shape[c], px, py)
+                total += shape[c, EXTINCTION] * density * azimuth_window(shape, c, px, py)
     return total * step
 
 
 @kernel
 def fill_sun_depth(shape, sun, c, i, out):
     """Sunward optical depth at one azimuth node of one curtain's table, into out (curtains, *_GRID)."""
-    near, far, bottom, top = extent(shape[c])
+    near, far, bottom, top = shape[c, OUTER_NEAR], shape[c, OUTER_FAR], shape[c, OUTER_BOTTOM], shape[c, OUTER_TOP]
     n_a, n_r, n_z = out.shape[1:]
     reach = min(math.pi, shape[c, HALF] + 0.5 * shape[c, EDGE_AZIMUTH])
     azimuth = shape[c, AZIMUTH] + reach * (2.0 * i / (n_a - 1) - 1.0)
@@ -112,33 +105,33 @@ def fill_sun_depth(shape, sun, c, i, out):
 
 
 @kernel
-def sun_depth_at(rain, c, azimuth_at, r, z):
-    """Optical depth to the sun from the table of one curtain; trilinear.
+def sun_depth_at(grid, c, i, a, b, d):
+    """Optical depth to the sun from curtain c's table (azimuth, distance, height); trilinear.
 
     Parameters
     ----------
-    azimuth_at : float
-        Azimuth from the curtain's middle, over the reach of its table, -1 to 1.
+    grid : (curtains, azimuths, distances, heights) float64
+    c, i, a : int, int, float
+        Curtain, azimuth node and the part of a step beyond it.
+    b, d : float
+        Distance and height in steps of the table.
     """
-    near, far, bottom, top = extent(rain.shape[c])
-    n_a, n_r, n_z = rain.sun_depth.shape[1:]
-    a = min(max(0.5 * (azimuth_at + 1.0) * (n_a - 1), 0.0), n_a - 1.0001)
-    b = min(max((r - near) / (far - near) * (n_r - 1), 0.0), n_r - 1.0001)
-    d = min(max((z - bottom) / (top - bottom) * (n_z - 1), 0.0), n_z - 1.0001)
-    i, j, k = int(a), int(b), int(d)
-    a, b, d = a - i, b - j, d - k
-    grid = rain.sun_depth[c]
-    low = (1 - b) * ((1 - d) * grid[i, j, k] + d * grid[i, j, k + 1])
-    low += b * ((1 - d) * grid[i, j + 1, k] + d * grid[i, j + 1, k + 1])
-    high = (1 - b) * ((1 - d) * grid[i + 1, j, k] + d * grid[i + 1, j, k + 1])
-    high += b * ((1 - d) * grid[i + 1, j + 1, k] + d * grid[i + 1, j + 1, k + 1])
-    return (1 - a) * low + a * high
+    b = min(max(b, 0.0), grid.shape[2] - 1.0001)
+    d = min(max(d, 0.0), grid.shape[3] - 1.0001)
+    j, k = int(b), int(d)
+    b, d = b - j, d - k
+    near = grid[c, i, j, k] + d * (grid[c, i, j, k + 1] - grid[c, i, j, k])
+    far = grid[c, i, j + 1, k] + d * (grid[c, i, j + 1, k + 1] - grid[c, i, j + 1, k])
+    low = near + b * (far - near)
+    near = grid[c, i + 1, j, k] + d * (grid[c, i + 1, j, k + 1] - grid[c, i + 1, j, k])
+    far = grid[c, i + 1, j + 1, k] + d * (grid[c, i + 1, j + 1, k + 1] - grid[c, i + 1, j + 1, k])
+    return low + a * (near + b * (far - near) - low)
 
 
 @kernel
-def clip_path(curtain, x, y, z, eye, reach):
-    """Part of a line of sight inside a curtain's outer limits, as distances from the eye; empty where first >= last."""
-    near, far, bottom, top = extent(curtain)
+def clip_path(shape, c, x, y, z, eye, reach):
+    """Part of a line of sight inside curtain c's outer limits, as distances from the eye; empty where first >= last."""
+    near, far, bottom, top = shape[c, OUTER_NEAR], shape[c, OUTER_FAR], shape[c, OUTER_BOTTOM], shape[c, OUTER_TOP]
     level = math.hypot(x, y)
     first, last = 0.0, reach
     if level > 1e-9:
@@ -178,19 +171,22 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
     transmittance : float
         Of all rain along the view.
     """
-    count = rain.shape.shape[0]
-    # scratch: ends of the parts inside, then depth of a step, azimuth in the sunward table, and azimuth window
+    # bound once: each access through the tuple would count a reference
+    shape, grid, haze = rain.shape, rain.sun_depth, rain.haze
+    count = shape.shape[0]
+    # scratch: ends of the parts inside, then depth of a step, azimuth in steps of the sunward table, azimuth window
     ends, passes, places, windows = marks[: 2 * count], marks[2 * count :], marks[3 * count :], marks[4 * count :]
     n = 0
     for c in range(count):
-        curtain = rain.shape[c]
         sunlit[c] = skylit[c] = 0.0
-        first, last = clip_path(curtain, x, y, z, eye, reach)
-        windows[c] = azimuth_window(curtain, x, y)
-        away = math.atan2(x, y) - curtain[AZIMUTH]
+        first, last = clip_path(shape, c, x, y, z, eye, reach)
+        windows[c] = azimuth_window(shape, c, x, y)
+        away = math.atan2(x, y) - shape[c, AZIMUTH]
         away -= 2.0 * math.pi * math.floor(away / (2.0 * math.pi) + 0.5)
-        places[c] = away / min(math.pi, curtain[HALF] + 0.5 * curtain[EDGE_AZIMUTH])
-        if first < last and curtain[EXTINCTION] > 0.0 and windows[c] > 0.0:
+        place = away / min(math.pi, shape[c, HALF] + 0.5 * shape[c, EDGE_AZIMUTH])
+        last_azimuth = grid.shape[1] - 1
+        places[c] = min(max(0.5 * (place + 1.0) * last_azimuth, 0.0), last_azimuth - 0.0001)
+        if first < last and shape[c, EXTINCTION] > 0.0 and windows[c] > 0.0:
             for end in (first, last):
                 # kept in order, so that no step crosses an outer limit
                 k = n
@@ -215,8 +211,8 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
             for c in range(count):
                 passes[c] = 0.0
                 if windows[c] > 0.0:
-                    density = level_window(rain.shape[c], r, height)
-                    passes[c] = rain.shape[c, EXTINCTION] * windows[c] * density * step
+                    density = level_window(shape, c, r, height)
+                    passes[c] = shape[c, EXTINCTION] * windows[c] * density * step
                     passed += passes[c]
             if passed <= 0.0:
                 continue
@@ -229,8 +225,11 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
                 if passes[c] > 0.0:
                     part = passes[c] * taken
                     skylit[c] += part
-                    to_sun = sun_depth_at(rain, c, places[c], r, height)
-                    sunlit[c] += part * math.exp(-to_sun - rain.haze * s)
+                    i = int(places[c])
+                    b = (r - shape[c, OUTER_NEAR]) * shape[c, PER_METRE_OUT]
+                    d = (height - shape[c, OUTER_BOTTOM]) * shape[c, PER_METRE_UP]
+                    to_sun = sun_depth_at(grid, c, i, places[c] - i, b, d)
+                    sunlit[c] += part * math.exp(-to_sun - haze * s)
     return clear
 
 
@@ -249,10 +248,10 @@ def make_curtains(scene, extinction_per_km, sun_vector, haze_per_m: float, *, th
     """
     sun = tuple(float(v) for v in sun_vector)
     antisolar_deg = math.degrees(math.atan2(-sun[0], -sun[1]))
-    shape = np.zeros((len(scene.rain), 10))
+    shape = np.zeros((len(scene.rain), 16))
     for row, rain, beta in zip(shape, scene.rain, extinction_per_km, strict=True):
         start, end = azimuth_limits_deg(rain, antisolar_deg)
-        row[:] = (
+        row[:OUTER_NEAR] = (
             beta * 1e-3,
             rain.near_m,
             rain.far_m,
@@ -264,6 +263,9 @@ def make_curtains(scene, extinction_per_km, sun_vector, haze_per_m: float, *, th
             math.radians(0.5 * (end - start)),
             math.radians(rain.edge_deg),
         )
+        near, far = max(rain.near_m - 0.5 * rain.edge_m, 0.0), rain.far_m + 0.5 * rain.edge_m
+        bottom, top = rain.bottom_m - 0.5 * rain.edge_top_m, rain.top_m + 0.5 * rain.edge_top_m
+        row[OUTER_NEAR:] = near, far, bottom, top, (_GRID[1] - 1) / (far - near), (_GRID[2] - 1) / (top - bottom)
     depth = np.zeros((len(shape), *_GRID))
     tasks = [(shape, sun, c, i, depth) for c in range(len(shape)) for i in range(_GRID[0])]
     run_all(fill_sun_depth, tasks, threads=threads)

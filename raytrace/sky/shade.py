@@ -17,7 +17,7 @@ from raytrace.sky.terrain import Terrain, ground_distance, horizon_slope
 # Layers, in the order in which they are added up; the bows' orders follow
 SKY, SUN, CLOUD, GROUND, VEIL, SKYLIT, FIRST_ORDER = range(7)
 _FAR_AWAY = 1e7
-_SUBSAMPLES = 3
+_MOST_SUBSAMPLES = 3
 
 
 class View(NamedTuple):
@@ -84,15 +84,17 @@ def shade(view, directions, inside, plate, pixel, layers):
                 sky_xyz(sky, hx, hy, hz, airlight)
                 for c in range(3):
                     airlight[c] = opacity * a[c] + (1.0 - opacity) * airlight[c]
-                for k in range(_SUBSAMPLES):
-                    e = elevation + pixel * ((k + 0.5) / _SUBSAMPLES - 0.5)
+                # a pixel that looks along the ground averages over a long strip of it
+                count = min(max(math.ceil(1.0 / (3.0 * max(-math.sin(elevation), 1e-3))), 1), _MOST_SUBSAMPLES)
+                for k in range(count):
+                    e = elevation + pixel * ((k + 0.5) / count - 0.5)
                     slope = math.tan(min(max(e, -1.5707), skyline - 1e-7))
                     distance = ground_distance(land, azimuth, slope)
                     if distance < 0.0:
                         distance = max(land.distance[-1], math.sqrt(2.0 * land.eye * 7.4e6)) * 0.999
                     straight = distance * math.sqrt(1.0 + slope * slope)
                     across = pixel * straight
-                    along = across / max(abs(math.sin(e)), 1e-3) / _SUBSAMPLES
+                    along = across / max(abs(math.sin(e)), 1e-3) / count
                     footprint = max(across, math.sqrt(across * min(along, 60.0 * across)))
                     if cover.kind == 5:
                         sea_xyz(cover, sky, distance, azimuth, slope, footprint, scratch, a)
@@ -101,9 +103,9 @@ def shade(view, directions, inside, plate, pixel, layers):
                     clear = math.exp(-rain.haze * straight)
                     distance_sum += straight
                     for c in range(3):
-                        layers[i, GROUND, c] += share / _SUBSAMPLES * a[c] * clear
-                        layers[i, VEIL, c] += share / _SUBSAMPLES * airlight[c] * (1.0 - clear)
-                reach = distance_sum / _SUBSAMPLES
+                        layers[i, GROUND, c] += share / count * a[c] * clear
+                        layers[i, VEIL, c] += share / count * airlight[c] * (1.0 - clear)
+                reach = distance_sum / count
             behind = look_through(rain, x, y, z, land.eye, reach, sunlit, skylit, marks)
             if part == 1:
                 for c in range(3):

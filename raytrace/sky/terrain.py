@@ -84,10 +84,11 @@ def surface_height(land, x, y, footprint):
 
 @kernel
 def fill_slopes(land, first, last):
-    """Slopes of the azimuth rows first to last of the grid."""
+    """Slopes of the azimuth rows first to last of the grid, counted on beyond a full turn."""
     count = land.slope.shape[0] - 1
-    for i in range(first, last):
-        azimuth = 2.0 * math.pi * (i % count) / count
+    for row in range(first, last):
+        i = row % count
+        azimuth = 2.0 * math.pi * i / count
         sin_a, cos_a = math.sin(azimuth), math.cos(azimuth)
         best = -1e30
         for k in range(land.distance.size):
@@ -96,6 +97,8 @@ def fill_slopes(land, first, last):
             z = surface_height(land, d * sin_a, d * cos_a, across) - d * d / (2.0 * EFFECTIVE_EARTH_M)
             best = max(best, (z - land.eye) / d)
             land.slope[i, k] = best
+            if i == 0:
+                land.slope[count, k] = best
 
 
 @kernel
@@ -165,7 +168,7 @@ def ground_distance(land, azimuth, slope):
     return land.distance[low] + (land.distance[high] - land.distance[low]) * (slope - before) / (after - before)
 
 
-def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Terrain:
+def make_terrain(ground, eye_m: float, pixel_rad: float, span=(0.0, 2 * math.pi), *, threads=None) -> Terrain:
     """Prepare the land of a scene.
 
     Parameters
@@ -176,6 +179,8 @@ def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Ter
         Height of the camera [m].
     pixel_rad : float
         Width of a pixel, which decides how finely the skyline is sampled [rad].
+    span : (float, float)
+        First azimuth that will be looked at, and the width of what will be [rad].
     """
     flat = ground.cover in ("sea", "plain", "none") or ground.relief_m == 0
     wooded = {"fields": 0.38, "meadow": 0.2, "forest": 1.0}.get(ground.cover, 0.0)
@@ -190,9 +195,11 @@ def make_terrain(ground, eye_m: float, pixel_rad: float, *, threads=None) -> Ter
         eye=float(eye_m),
         seed=np.uint64(ground.seed),
         distance=distance,
-        slope=np.empty((1 if flat else count + 1, _DISTANCES)),
+        slope=np.full((1 if flat else count + 1, _DISTANCES), -1e30),
     )
     if not flat:
-        pieces = np.linspace(0, count + 1, 33).astype(int)
+        first = math.floor(span[0] / (2 * math.pi) * count)
+        rows = min(math.ceil(span[1] / (2 * math.pi) * count) + 2, count)
+        pieces = np.linspace(first, first + rows, 33).astype(int)
         run_all(fill_slopes, [(land, int(a), int(b)) for a, b in itertools.pairwise(pieces)], threads=threads)
     return land
