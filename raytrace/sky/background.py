@@ -150,11 +150,8 @@ def cloud_cover(sky, x, y, z, out):
     inside = 1.0 - smoothstep(sky.cloud_top - half, sky.cloud_top + half, elevation + frayed)
     inside *= smoothstep(sky.cloud_base - half, sky.cloud_base + half, elevation + frayed)
     if sky.cloud_half < math.pi - 1e-6:
-        # meridians run together towards the zenith, so an edge of the same width on the sky spans more azimuth there
-        spread = 1.0 / max(level, 0.02)
-        inside *= 1.0 - smoothstep(
-            sky.cloud_half - half * spread, sky.cloud_half + half * spread, away + frayed * spread
-        )
+        # meridians run together towards the zenith: the distance from the limit counts on the sky, not in azimuth
+        inside *= 1.0 - smoothstep(-half, half, (away - sky.cloud_half) * level + frayed)
     opacity = sky.cloud_cover * inside
     shade = 1.0 + sky.cloud_texture * (0.9 * wide + 0.6 * fine)
     shade = max(shade, 0.15)
