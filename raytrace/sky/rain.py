@@ -16,9 +16,9 @@ import numpy as np
 from raytrace.jit import kernel, run_all
 from raytrace.sky.noise import smoothstep
 
-# Nodes of the table of sunward optical depth (azimuth, level distance, height) and steps along each path
+# Nodes of the table of sunward optical depth (azimuth, level distance, height) and steps along each part of a path
 _GRID = (96, 32, 20)
-_SUN_STEPS = 48
+_SUN_STEPS = 32
 VIEW_STEPS = 24
 
 # Columns of the array of curtains, one row a curtain; those from OUTER_NEAR on follow from the ones before
@@ -62,32 +62,52 @@ def level_window(shape, c, r, z):
 
 
 @kernel
+def _circle(x, y, dx, dy, radius):
+    """Where the level path (x, y) + s (dx, dy) enters and leaves a circle round the origin; none if last < first."""
+    square = dx * dx + dy * dy
+    along = x * dx + y * dy
+    inside = along * along - square * (x * x + y * y - radius * radius)
+    if inside <= 0.0 or square < 1e-18:
+        # a path straight up never leaves the circle that it is in
+        return (-1e30, 1e30) if square < 1e-18 and x * x + y * y < radius * radius else (1.0, -1.0)
+    root = math.sqrt(inside)
+    return (-along - root) / square, (-along + root) / square
+
+
+@kernel
 def depth_to_sun(shape, sun, x, y, z):
-    """Optical depth from a point to the sun through all curtains (midpoint rule up to the last curtain's edge)."""
-    far, top = 0.0, -1e30
-    for c in range(shape.shape[0]):
-        far, top = max(far, shape[c, OUTER_FAR]), max(top, shape[c, OUTER_TOP])
-    # path until it is above every curtain or outside the widest circle
-    level2 = sun[0] * sun[0] + sun[1] * sun[1]
-    along = x * sun[0] + y * sun[1]
-    length = 1e30
-    if level2 > 1e-12:
-        inside = along * along - level2 * (x * x + y * y - far * far)
-        length = (-along + math.sqrt(max(inside, 0.0))) / level2
-    if sun[2] > 1e-9:
-        length = min(length, max(top - z, 0.0) / sun[2])
-    length = max(length, 0.0)
-    step = length / _SUN_STEPS
+    """Optical depth from a point to the sun through all curtains.
+
+    Of each curtain the path crosses at most two parts, before and behind the hollow round the camera; the midpoint rule
+    runs over just these, so that no step is spent outside and sharp edges fall between steps.
+    """
     total = 0.0
-    for k in range(_SUN_STEPS):
-        s = (k + 0.5) * step
-        px, py, pz = x + s * sun[0], y + s * sun[1], z + s * sun[2]
-        r = math.hypot(px, py)
-        for c in range(shape.shape[0]):
-            density = level_window(shape, c, r, pz)
-            if density > 0.0:
-                total += shape[c, EXTINCTION] * density * azimuth_window(shape, c, px, py)
-    return total * step
+    for c in range(shape.shape[0]):
+        enter, leave = _circle(x, y, sun[0], sun[1], shape[c, OUTER_FAR])
+        enter = max(enter, 0.0)
+        if sun[2] > 1e-9:
+            enter = max(enter, (shape[c, OUTER_BOTTOM] - z) / sun[2])
+            leave = min(leave, (shape[c, OUTER_TOP] - z) / sun[2])
+        elif not shape[c, OUTER_BOTTOM] <= z <= shape[c, OUTER_TOP]:
+            continue
+        if leave <= enter:
+            continue
+        first, last = _circle(x, y, sun[0], sun[1], shape[c, OUTER_NEAR])
+        if last <= first:
+            first = last = leave
+        for part in range(2):
+            start = enter if part == 0 else max(enter, last)
+            length = (min(first, leave) if part == 0 else leave) - start
+            if length <= 0.0:
+                continue
+            step = length / _SUN_STEPS
+            for k in range(_SUN_STEPS):
+                s = start + (k + 0.5) * step
+                px, py = x + s * sun[0], y + s * sun[1]
+                density = level_window(shape, c, math.hypot(px, py), z + s * sun[2])
+                if density > 0.0:
+                    total += shape[c, EXTINCTION] * density * azimuth_window(shape, c, px, py) * step
+    return total
 
 
 @kernel
@@ -198,12 +218,19 @@ def look_through(rain, x, y, z, eye, reach, sunlit, skylit, marks):
     if n == 0:
         return 1.0
     level = math.hypot(x, y)
-    steps = max(2 * VIEW_STEPS // n, 8)
+    # dense rain takes all the light in its first steps: enough of them that none is deeper than a third
+    whole, dense = ends[n - 1] - ends[0], 0.0
+    for c in range(count):
+        dense += shape[c, EXTINCTION]
+    fine = max(VIEW_STEPS, min(int(3.0 * dense * whole), 8 * VIEW_STEPS))
     depth, clear = 0.0, 1.0
     for e in range(n - 1):
-        step = (ends[e + 1] - ends[e]) / steps
-        if step <= 0.0:
+        length = ends[e + 1] - ends[e]
+        if length <= 0.0:
             continue
+        # a short part, as of near spray before far rain, still gets its share
+        steps = max(math.ceil(fine * length / whole), VIEW_STEPS // 2) if n > 2 else fine
+        step = length / steps
         for k in range(steps):
             s = ends[e] + (k + 0.5) * step
             r, height = s * level, eye + s * z
