@@ -50,8 +50,9 @@ def kernel_cache_folder() -> Path | None:
     try:
         fresh = not folder.is_dir()
         folder.mkdir(parents=True, exist_ok=True)
-        with tempfile.TemporaryFile(dir=folder):
-            pass
+        # more than all kernels together take: on a full disk numba would fail in the midst of a computation
+        with tempfile.TemporaryFile(dir=folder) as probe:
+            probe.write(bytes(2**20))
         if fresh:
             _drop_old(folder)
     except OSError:
