@@ -14,7 +14,6 @@ from __future__ import annotations
 
 import functools
 import hashlib
-import os
 import shutil
 import sys
 import tempfile
@@ -23,6 +22,8 @@ from pathlib import Path
 
 import numba
 import platformdirs
+
+from raytrace.cores import core_count
 
 # Floating point stays strict: fast mathematics would let the compiler reorder sums (bytes that change with the machine)
 # and make isnan lie. error_model "numpy" only drops the test for division by zero, which would stop vectorisation.
@@ -90,11 +91,6 @@ def kernel(function=None, *, inline: bool = False):
         return numba.njit(**options, cache=True)(function)
     finally:
         numba.config.CACHE_DIR = before
-
-
-def core_count() -> int:
-    """Cores that this process may use."""
-    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
 def run_all(function, tasks, *, threads: int | None = None, on_done=None) -> None:

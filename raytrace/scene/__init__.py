@@ -1,0 +1,1 @@
+"""The scene: its model, its rules, and how files are read and problems told."""

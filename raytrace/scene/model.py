@@ -7,9 +7,10 @@ The checks that need more than one key are in `rules.py`; reading files and word
 from __future__ import annotations
 
 import datetime as dt
+from pathlib import Path
 from typing import Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, PrivateAttr
 
 
 class Table(BaseModel):
@@ -23,7 +24,9 @@ class Sun(Table):
 
     elevation_deg: float | None = Field(None, ge=-90, le=90, description="apparent elevation of the sun's centre [deg]")
     azimuth_deg: float | None = Field(None, ge=-360, le=360, description="azimuth, clockwise from north [deg]")
-    latitude_deg: float | None = Field(None, ge=-90, le=90, description="latitude of the observer, north positive [deg]")
+    latitude_deg: float | None = Field(
+        None, ge=-90, le=90, description="latitude of the observer, north positive [deg]"
+    )
     longitude_deg: float | None = Field(None, ge=-180, le=180, description="longitude, east positive [deg]")
     height_m: float = Field(0.0, ge=-430, le=9000, description="height of the place above sea level [m]")
     time: dt.datetime | None = Field(None, description="TOML date-time with offset from UTC")
@@ -76,8 +79,12 @@ class Rain(Table):
     azimuth_to_deg: float | None = Field(
         None, ge=-360, le=720, description="right limit; 85 degrees right of the antisolar point unless given [deg]"
     )
-    edge_m: float = Field(150.0, ge=0, le=20_000, description="width of the soft edge at near and far [m]")
-    edge_top_m: float = Field(300.0, ge=0, le=10_000, description="width of the soft edge at bottom and top [m]")
+    edge_m: float = Field(
+        150.0, ge=0, le=20_000, description="soft edge at near and far; at most half the depth unless given [m]"
+    )
+    edge_top_m: float = Field(
+        300.0, ge=0, le=10_000, description="soft edge at bottom and top; at most half the height unless given [m]"
+    )
     edge_deg: float = Field(12.0, ge=0, le=90, description="width of the soft edge at the azimuth limits [deg]")
 
 
@@ -112,7 +119,10 @@ class Sky(Table):
     model: Literal["cie", "uniform", "black", "plate"] = Field("cie", description="kind of background")
     cie_type: int = Field(12, ge=1, le=15, description="CIE standard general sky type (ISO 15469)")
     illuminance_lx: float | None = Field(
-        None, gt=0, le=200_000, description="diffuse illuminance on level ground, in place of the clear-sky model's [lx]"
+        None,
+        gt=0,
+        le=200_000,
+        description="diffuse illuminance on level ground, in place of the clear-sky model's [lx]",
     )
     luminance_cd_m2: float | None = Field(
         None, ge=0, le=1e9, description="luminance of model 'uniform'; 2000 unless given [cd/m2]"
@@ -171,3 +181,11 @@ class Scene(Table):
     sky: Sky = Sky()
     ground: Ground = Ground()
     camera: Camera
+
+    _folder: Path | None = PrivateAttr(None)
+
+    def plate_path(self) -> Path | None:
+        """Absolute path of the plate, which is given from the folder of the scene file; None without one."""
+        if self.sky.plate is None or self._folder is None:
+            return None
+        return (self._folder / self.sky.plate).resolve()

@@ -49,6 +49,11 @@ def takagi_1990(luminance_cd_m2: np.ndarray) -> np.ndarray:
     return np.clip(6500.0 + 1.1985e8 / np.maximum(luminance_cd_m2, 1.0) ** 1.2, 4000.0, 25_000.0)
 
 
+def uniform_luminance_cd_m2(sky) -> float:
+    """Luminance of the sky model "uniform": the scene's, or 2000 [cd/m2]."""
+    return 2000.0 if sky.luminance_cd_m2 is None else sky.luminance_cd_m2
+
+
 def make_background(scene, light, sun_vector) -> Background:
     """Prepare the sky of a scene.
 
@@ -67,7 +72,7 @@ def make_background(scene, light, sun_vector) -> Background:
     if sky.model == "cie":
         zenith = light.diffuse_horizontal_lx / horizontal_integral(kind, sun, 180, 180)
     elif sky.model == "uniform":
-        uniform = 2000.0 if sky.luminance_cd_m2 is None else sky.luminance_cd_m2
+        uniform = uniform_luminance_cd_m2(sky)
     luminance = np.geomspace(1.0, 1e6, _CCT_STEPS)
     if sky.colour_temperature_k is not None:
         cct = np.full(_CCT_STEPS, sky.colour_temperature_k)

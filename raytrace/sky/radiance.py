@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import dataclasses
 import math
 
 import numpy as np
@@ -14,7 +13,7 @@ from raytrace.light.spectrum import Illumination
 from raytrace.light.sun import direction
 from raytrace.optics.fold import project_with_sun_disc
 from raytrace.optics.table import ScatteringTable
-from raytrace.sky.background import make_background
+from raytrace.sky.background import make_background, uniform_luminance_cd_m2
 from raytrace.sky.ground import make_cover, mean_ground_xyz
 from raytrace.sky.rain import make_curtains
 from raytrace.sky.shade import FIRST_ORDER, View, shade
@@ -38,13 +37,17 @@ def layer_names(paths: int) -> list[str]:
 
 
 def with_sky_illuminance(scene, light: Illumination) -> Illumination:
-    """The light of a scene, its diffuse part scaled to `sky.illuminance_lx` where the scene gives one."""
-    wanted = scene.sky.illuminance_lx
+    """The light of a scene, its diffuse part scaled to what the sky that is drawn gives.
+
+    A uniform sky of luminance L lights level ground with pi L, a black one with nothing; elsewhere it is
+    `sky.illuminance_lx` where the scene gives one, else the clear-sky model's.
+    """
+    sky = scene.sky
+    wanted = {"uniform": math.pi * uniform_luminance_cd_m2(sky), "black": 0.0}.get(sky.model, sky.illuminance_lx)
     if wanted is None or light.diffuse_horizontal_lx <= 0:
         return light
     factor = wanted / light.diffuse_horizontal_lx
-    changes = {"diffuse_horizontal": light.diffuse_horizontal * factor, "diffuse_horizontal_lx": wanted}
-    return light._replace(**changes) if hasattr(light, "_replace") else dataclasses.replace(light, **changes)
+    return light._replace(diffuse_horizontal=light.diffuse_horizontal * factor, diffuse_horizontal_lx=wanted)
 
 
 def order_xyz(

@@ -1,0 +1,222 @@
+"""The command line: arguments, exit status, and one line for whatever goes wrong. Heavy imports happen on use."""
+
+from __future__ import annotations
+
+import argparse
+import contextlib
+import difflib
+import os
+import sys
+import warnings
+from pathlib import Path
+
+from raytrace.errors import InputError
+
+DONE, FAILED, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
+
+
+class _Parser(argparse.ArgumentParser):
+    """Argument errors as one line, with the nearest word that would work."""
+
+    def error(self, message):
+        raise InputError(f"{self.prog}: {_one_line(message)}{self._hint(message)}; what works: {self.prog} --help")
+
+    def _hint(self, message):
+        words = [word.split("=")[0] for word in message.replace("'", " ").split() if word.startswith("-")]
+        options = [option for action in self._actions for option in action.option_strings]
+        for word in words if "unrecognized" in message else ():
+            close = difflib.get_close_matches(word, options, n=1)
+            if close:
+                return f" (nearest: {close[0]})"
+        return ""
+
+
+def run(arguments: list[str]) -> int:
+    """Run one command.
+
+    Parameters
+    ----------
+    arguments : list of str
+        Without the program's name.
+
+    Returns
+    -------
+    int
+        0 done, 2 bad input, 1 anything else, 130 interrupted.
+    """
+    try:
+        options = _parse(arguments)
+        with warnings.catch_warnings():
+            warnings.showwarning = _show_warning
+            return options.command(options)
+    except InputError as problem:
+        for line in problem.problems:
+            print(line, file=sys.stderr)
+        return BAD_INPUT
+    except BrokenPipeError:
+        # whoever read our output has gone: what is left in the buffer must not raise again at exit
+        with contextlib.suppress(OSError):
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return FAILED
+    except KeyboardInterrupt:
+        print("raytrace: interrupted; no file was written", file=sys.stderr)
+        return INTERRUPTED
+    except SystemExit as leaving:
+        # --help and --version
+        return DONE if leaving.code in (None, 0) else BAD_INPUT
+    except MemoryError:
+        print("raytrace: out of memory; what works: a smaller --size, fewer optics.bins", file=sys.stderr)
+        return FAILED
+    except Exception as problem:
+        if os.environ.get("RAYTRACE_DEBUG"):
+            raise
+        print(f"raytrace: {type(problem).__name__}: {_one_line(str(problem))}", file=sys.stderr)
+        return FAILED
+
+
+def _parse(arguments: list[str]):
+    parser = _Parser(
+        prog="raytrace",
+        description="Turns a scene file into a calibrated picture of the sky with its rainbows.",
+        epilog="A scene file is explained key by key in scenes/README.md. "
+        "Exit status: 0 done, 2 bad input (one line each on standard error), 1 anything else.",
+    )
+    parser.add_argument("--version", action="version", version=f"raytrace {_version()}")
+    commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
+
+    render = commands.add_parser("render", help="scene file to picture", description="Renders a scene file to a PNG.")
+    render.add_argument("scene", metavar="SCENE", help="scene file (TOML)")
+    render.add_argument("-o", "--output", metavar="PNG", help="picture to write; SCENE's name with .png unless given")
+    render.add_argument("--size", metavar="WxH", help="size of the picture in pixels, in place of the scene's")
+    render.add_argument("--seed", metavar="N", help="seed of the rays and the dither, in place of the scene's")
+    render.add_argument("--threads", metavar="N", help="threads to use; all cores unless given")
+    render.add_argument("--no-cache", action="store_true", help="neither read nor keep traced tables")
+    render.set_defaults(command=_render)
+
+    check = commands.add_parser("check", help="validate scene files", description="Says what render would use.")
+    check.add_argument("scenes", metavar="SCENE", nargs="+", help="scene file (TOML)")
+    check.set_defaults(command=_check)
+
+    info = commands.add_parser("info", help="versions, threads, caches", description="Says what the program runs on.")
+    info.set_defaults(command=_info)
+
+    names = list(commands.choices)
+    first = next((word for word in arguments if not word.startswith("-")), None)
+    if first is not None and first not in names:
+        close = difflib.get_close_matches(first, names, n=1)
+        works = f'"{close[0]}"' if close else " or ".join(names)
+        raise InputError(f"raytrace: {_one_line(first)!r} is no command; what works: {works}")
+    options = parser.parse_args(arguments)
+    if not hasattr(options, "command"):
+        raise InputError(f"raytrace: no command given; what works: {', '.join(names)}, or --help")
+    return options
+
+
+def _render(options) -> int:
+    from raytrace.scene.load import load_scene
+
+    threads = None if options.threads is None else _threads(options.threads)
+    output = _output(options.output, options.scene)
+    scene = _with_options(load_scene(options.scene), options)
+    from raytrace.preflight import preflight
+
+    preflight(scene, name=options.scene)
+    from raytrace.frame import render
+
+    frame = render(scene, threads=threads, cache=not options.no_cache, progress=sys.stderr.isatty())
+    try:
+        frame.save(output)
+    except OSError as problem:
+        raise InputError(
+            f"{output}: cannot be written ({problem.strerror or problem}); what works: another folder"
+        ) from None
+    print(f"{output}: {frame.summary()}")
+    return DONE
+
+
+def _check(options) -> int:
+    from raytrace.report import scene_report
+    from raytrace.scene.load import load_scene
+
+    status = DONE
+    for number, path in enumerate(options.scenes):
+        try:
+            report = scene_report(load_scene(path), name=path)
+        except InputError as problem:
+            status = BAD_INPUT
+            for line in problem.problems:
+                print(line, file=sys.stderr)
+            continue
+        if number:
+            print()
+        print(report)
+    return status
+
+
+def _info(options) -> int:
+    from raytrace.report import machine_report
+
+    print(machine_report())
+    return DONE
+
+
+def _output(given: str | None, scene: str) -> Path:
+    """Where the picture goes, checked before any work is done."""
+    path = Path(given) if given is not None else Path(Path(scene).stem + ".png")
+    if path.suffix.lower() != ".png":
+        raise InputError(f"{_one_line(str(path))}: is no name of a PNG file; what works: a name that ends in .png")
+    if path.is_dir():
+        raise InputError(f"{path}: is a folder; what works: the name of a file in it")
+    if not path.parent.is_dir():
+        raise InputError(f"{_one_line(str(path))}: there is no folder {path.parent}; what works: a folder that exists")
+    if not os.access(path.parent, os.W_OK):
+        raise InputError(f"{path}: the folder {path.parent} may not be written; what works: -o in another folder")
+    with contextlib.suppress(OSError):
+        if path.samefile(scene):
+            raise InputError(f"{path}: is the scene file itself; what works: another name")
+    return path
+
+
+def _with_options(scene, options):
+    """The scene with what the command line puts in its place, checked as if the file had said so."""
+    from raytrace.scene.load import scene_from_dict
+
+    if options.size is None and options.seed is None:
+        return scene
+    data = scene.model_dump(exclude_unset=True)
+    data["rain"] = [dict(rain) for rain in data["rain"]]
+    if options.size is not None:
+        width, cross, height = options.size.lower().partition("x")
+        if not (cross and width.isdecimal() and height.isdecimal() and len(options.size) < 20):
+            raise InputError(f"--size: {_one_line(options.size)!r} is no size; what works: --size 1280x720")
+        data["camera"] |= {"width_px": int(width), "height_px": int(height)}
+    if options.seed is not None:
+        if not (options.seed.isdecimal() and len(options.seed) < 25):
+            raise InputError(f"--seed: {_one_line(options.seed)!r} is no seed; what works: a whole number from 0")
+        data["optics"] = data.get("optics", {}) | {"seed": int(options.seed)}
+    return scene_from_dict(data, folder=scene._folder, name=options.scene)
+
+
+def _threads(text: str) -> int:
+    from raytrace.cores import core_count
+
+    most = core_count()
+    if not (text.isdecimal() and len(text) < 10 and 1 <= int(text) <= most):
+        raise InputError(f"--threads: {_one_line(text)!r} given; what works: 1 to {most}, the cores of this machine")
+    return int(text)
+
+
+def _version() -> str:
+    import raytrace
+
+    return raytrace.__version__
+
+
+def _one_line(text: str) -> str:
+    out = " ".join(text.split())
+    out = "".join(c if c.isprintable() else "?" for c in out)
+    return out if len(out) <= 300 else out[:297] + "..."
+
+
+def _show_warning(message, category, filename, lineno, file=None, line=None):
+    print(f"raytrace: warning: {_one_line(str(message))}", file=sys.stderr)

@@ -1,0 +1,89 @@
+"""What is checked after a scene is read and before anything compiles: the sun's place, and memory."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+from raytrace.errors import InputError
+from raytrace.optics.scattering import wavelengths_nm
+
+# Measured with 1280x720 and 7680x4320 pictures (tests/benchmarks); rounded up
+FIXED_BYTES = 420e6
+BYTES_PER_PIXEL = 36
+BYTES_PER_LAYER_PIXEL = 12
+TABLES_AT_ONCE = 3.2
+
+
+def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
+    """Refuse a scene that cannot be rendered here.
+
+    Raises
+    ------
+    InputError
+        If the sun is below the horizon at the place and time given, or the picture needs more memory than is free.
+    """
+    problems = []
+    if scene.sun.time is not None:
+        from raytrace.light.sun import sun_place
+
+        sun = sun_place(scene)
+        if sun.elevation_deg <= 0:
+            problems.append(
+                f"{name}: sun.time: {scene.sun.time.isoformat()} puts the sun {-sun.elevation_deg:.1f} deg below the "
+                "horizon at this place; what works: a time by day"
+            )
+    need, free = needed_bytes(scene, layers=layers), free_bytes()
+    if need > free:
+        width, height = scene.camera.width_px, scene.camera.height_px
+        spare = free - (need - width * height * _per_pixel(scene, layers))
+        works = "a machine with more free memory"
+        if spare > 0:
+            shrink = (spare / _per_pixel(scene, layers) / (width * height)) ** 0.5
+            works = f"{int(width * shrink)}x{int(height * shrink)} px or smaller"
+        problems.append(
+            f"{name}: camera.width_px: {width}x{height} px would need {need / 1e9:.1f} GB of memory and "
+            f"{free / 1e9:.1f} GB are free; what works: {works}"
+        )
+    if problems:
+        raise InputError(*problems)
+
+
+def needed_bytes(scene, *, layers: bool = False) -> float:
+    """Estimate of the memory that rendering a scene takes at its peak [B]."""
+    optics = scene.optics
+    table = 2 * 8 * 2 * optics.paths * optics.bins * wavelengths_nm(optics).size
+    # per block of rays a histogram of its own
+    tracing = 32 * 8 * 2 * optics.paths * optics.bins
+    pixels = scene.camera.width_px * scene.camera.height_px
+    return FIXED_BYTES + max(TABLES_AT_ONCE * table / 2, table + tracing) + pixels * _per_pixel(scene, layers)
+
+
+def _per_pixel(scene, layers: bool) -> float:
+    each = BYTES_PER_PIXEL + (12 if scene.sky.model == "plate" else 0)
+    return each + (BYTES_PER_LAYER_PIXEL * (scene.optics.paths + 6) if layers else 0)
+
+
+def free_bytes() -> float:
+    """Memory that this process may still take: the machine's, or its control group's where that is less [B]."""
+    free = float("inf")
+    try:
+        for line in Path("/proc/meminfo").read_text().splitlines():
+            if line.startswith("MemAvailable:"):
+                free = int(line.split()[1]) * 1024.0
+    except (OSError, ValueError, IndexError):
+        pass
+    if free == float("inf"):
+        try:
+            free = float(os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE"))
+        except (OSError, ValueError, AttributeError):
+            return free
+    for limit, used in (
+        ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory.current"),
+        ("/sys/fs/cgroup/memory/memory.limit_in_bytes", "/sys/fs/cgroup/memory/memory.usage_in_bytes"),
+    ):
+        try:
+            free = min(free, float(Path(limit).read_text()) - float(Path(used).read_text()))
+        except (OSError, ValueError):
+            continue
+    return free

@@ -1,0 +1,251 @@
+"""Read a scene file, and say everything that is wrong with it at once, a line each."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import tomllib
+import typing
+from pathlib import Path
+
+from pydantic import BaseModel, ValidationError
+
+from raytrace.errors import InputError
+from raytrace.scene import model as scene_model
+from raytrace.scene.problems import Problem, in_toml, kind_in_toml, nearest, quoted
+from raytrace.scene.rules import RULES, across_rules
+
+LARGEST_BYTES = 1 << 20
+MOST_CURTAINS = 8
+_TABLES = {
+    "sun": scene_model.Sun,
+    "air": scene_model.Air,
+    "rain": scene_model.Rain,
+    "optics": scene_model.Optics,
+    "sky": scene_model.Sky,
+    "ground": scene_model.Ground,
+    "camera": scene_model.Camera,
+}
+_NEEDED = ("sun", "rain", "camera")
+
+
+def load_scene(path) -> scene_model.Scene:
+    """Read and check a scene file.
+
+    Parameters
+    ----------
+    path : path-like
+        A TOML file.
+
+    Returns
+    -------
+    Scene
+
+    Raises
+    ------
+    InputError
+        With every problem of the file, one line each: file, key, what was given, why it cannot be, what would work.
+    """
+    path = Path(path)
+    name = str(path)
+    data = _read(path, name)
+    return scene_from_dict(data, folder=path.parent, name=name)
+
+
+def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scene") -> scene_model.Scene:
+    """Check the content of a scene file.
+
+    Parameters
+    ----------
+    data : dict
+        As TOML gives it.
+    folder : path, optional
+        Where relative paths start.
+    name : str
+        What problems call the file.
+
+    Raises
+    ------
+    InputError
+        With every problem, one line each.
+    """
+    problems: list[Problem] = []
+    tables: dict = {}
+    for key in data:
+        if key not in _TABLES:
+            problems.append(Problem(_key(key), None, "is no table of a scene", nearest(key, list(_TABLES))))
+    for table, kind in _TABLES.items():
+        if table not in data:
+            if table in _NEEDED:
+                problems.append(Problem(table, None, "is missing", f"a table [{table}]"))
+            continue
+        if table == "rain":
+            sound = _curtains(data[table], problems)
+        else:
+            sound = _table(table, table, kind, data[table], problems)
+        if sound is not None:
+            tables[table] = sound
+    problems.extend(across_rules(tables, folder))
+    if problems:
+        raise InputError(*(problem.line(name) for problem in problems))
+    scene = scene_model.Scene(**tables)
+    scene._folder = None if folder is None else Path(folder)
+    return scene
+
+
+def scene_hash(scene: scene_model.Scene) -> str:
+    """SHA-256 of all that a scene says, defaults and the plate's bytes included, however its file is laid out."""
+    text = json.dumps(scene.model_dump(mode="json"), sort_keys=True, ensure_ascii=True, allow_nan=False)
+    digest = hashlib.sha256(text.encode())
+    if scene.plate_path() is not None:
+        digest.update(scene.plate_path().read_bytes())
+    return digest.hexdigest()
+
+
+def _read(path: Path, name: str) -> dict:
+    def refuse(why, works):
+        raise InputError(f"{quoted(name, 200)}: {why}; what works: {works}")
+
+    try:
+        if path.is_dir():
+            refuse("is a folder", "a scene file, such as scenes/double_bow.toml")
+        if not path.exists():
+            refuse("there is no such file", "the path of a scene file, such as scenes/double_bow.toml")
+        if not path.is_file():
+            refuse("is not a plain file", "the path of a scene file")
+        if path.stat().st_size > LARGEST_BYTES:
+            refuse(f"has {path.stat().st_size} bytes", f"a scene file of up to {LARGEST_BYTES} bytes")
+        content = path.read_bytes()
+    except (OSError, ValueError) as problem:
+        if isinstance(problem, InputError):
+            raise
+        refuse(f"cannot be read ({quoted(str(problem))})", "a file that may be read")
+    if content.startswith(b"\xef\xbb\xbf"):
+        refuse("begins with a byte order mark", "UTF-8 without one")
+    try:
+        return tomllib.loads(content.decode("utf-8"))
+    except UnicodeDecodeError as problem:
+        refuse(f"byte {problem.start} is not UTF-8", "a TOML file in UTF-8")
+    except RecursionError:
+        refuse("is nested too deeply", "tables and keys as in scenes/README.md")
+    except ValueError as problem:
+        refuse(f"is not TOML: {quoted(str(problem), 120)}", "TOML 1.0, as in scenes/double_bow.toml")
+
+
+def _curtains(data, problems: list[Problem]):
+    """The table [rain], or the tables [[rain]]; None where one of them is not sound."""
+    if isinstance(data, dict):
+        sound = _table("rain", "rain", scene_model.Rain, data, problems)
+        return None if sound is None else (_settled(sound),)
+    if not isinstance(data, list):
+        problems.append(Problem("rain", data, f"is {kind_in_toml(data)}", "a table [rain] or tables [[rain]]"))
+        return None
+    if not 1 <= len(data) <= MOST_CURTAINS:
+        problems.append(Problem("rain", data, f"has {len(data)} entries", f"1 to {MOST_CURTAINS} tables [[rain]]"))
+        return None
+    found = [_table("rain", f"rain[{k}]", scene_model.Rain, item, problems) for k, item in enumerate(data)]
+    return None if None in found else tuple(_settled(rain) for rain in found)
+
+
+def _settled(rain: scene_model.Rain) -> scene_model.Rain:
+    """Soft edges that were not asked for shrink to what a small curtain can hold."""
+    given = rain.model_fields_set
+    changes = {}
+    if "edge_m" not in given:
+        changes["edge_m"] = min(rain.edge_m, 0.5 * (rain.far_m - rain.near_m))
+    if "edge_top_m" not in given:
+        changes["edge_top_m"] = min(rain.edge_top_m, 0.5 * (rain.top_m - rain.bottom_m))
+    return rain.model_copy(update=changes)
+
+
+def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[Problem]):
+    """One table checked by its model and then by its rules; None where a problem was found."""
+    if not isinstance(data, dict):
+        problems.append(Problem(where, data, f"is {kind_in_toml(data)}", f"a table [{table}]"))
+        return None
+    try:
+        sound = kind.model_validate(data)
+    except ValidationError as failure:
+        for error in failure.errors(include_url=False):
+            problems.append(_problem(where, kind, data, error))
+        return None
+    except (OverflowError, RecursionError):
+        problems.append(
+            Problem(where, None, "has a number too large to hold, or is nested too deeply", "plain numbers")
+        )
+        return None
+    found = list(RULES[table](sound, sound.model_fields_set)) if table in RULES else []
+    problems.extend(problem._replace(key=f"{where}.{problem.key}") for problem in found)
+    return None if found else sound
+
+
+def _problem(where: str, kind: type[BaseModel], data, error) -> Problem:
+    """A problem in our words from one of pydantic's."""
+    location = [part for part in error["loc"] if isinstance(part, str)]
+    owner, field = kind, None
+    for part in location:
+        field = owner.model_fields.get(part)
+        inner = _table_in(field)
+        if inner is not None and part != location[-1]:
+            owner = inner
+    key = ".".join([where, *map(_key, location)])
+    value = error["input"]
+    if error["type"] == "extra_forbidden":
+        others = {name: list(model.model_fields) for name, model in _TABLES.items() if model is not owner}
+        return Problem(key, value, "is no key of this table", nearest(location[-1], list(owner.model_fields), others))
+    if error["type"] == "missing":
+        return Problem(key, None, "is missing", _works(field))
+    if _table_in(field) is not None:
+        return Problem(key, value, f"is {kind_in_toml(value)}", f"a table [{key}]")
+    if error["type"].endswith("_type") or error["type"] in ("int_from_float", "datetime_type"):
+        return Problem(key, value, f"is {kind_in_toml(value)}", _works(field))
+    if error["type"] == "literal_error":
+        return Problem(key, value, "is none of the choices", _works(field))
+    if error["type"] == "finite_number":
+        return Problem(key, value, "is not finite", _works(field))
+    return Problem(key, value, "is out of range", _works(field))
+
+
+def _table_in(field) -> type[BaseModel] | None:
+    """The model behind a field that is a table of its own."""
+    if field is None:
+        return None
+    for kind in (field.annotation, *typing.get_args(field.annotation)):
+        if isinstance(kind, type) and issubclass(kind, BaseModel):
+            return kind
+    return None
+
+
+def _works(field) -> str:
+    """What a field takes, in words."""
+    kinds = [kind for kind in (field.annotation, *typing.get_args(field.annotation)) if kind is not type(None)]
+    choices = [c for kind in kinds if typing.get_origin(kind) is typing.Literal for c in typing.get_args(kind)]
+    if typing.get_origin(field.annotation) is typing.Literal:
+        choices = list(typing.get_args(field.annotation))
+    if choices:
+        return " or ".join(in_toml(choice) for choice in choices)
+    if str in kinds:
+        return "a string"
+    if scene_model.dt.datetime in kinds:
+        return "a date-time with its offset, such as 2026-10-04T16:20:00+01:00"
+    return f"{'a whole number' if int in kinds else 'a number'} from {field_range(field)}"
+
+
+def field_range(field) -> str:
+    """Range of a number, as `0 to 90` or `above 0 to 300`."""
+    low = high = None
+    open_low = ""
+    for rule in field.metadata:
+        for name in ("ge", "gt"):
+            if getattr(rule, name, None) is not None:
+                low, open_low = getattr(rule, name), "above " if name == "gt" else ""
+        for name in ("le", "lt"):
+            if getattr(rule, name, None) is not None:
+                high = getattr(rule, name)
+    return f"{open_low}{in_toml(low)} to {in_toml(high)}"
+
+
+def _key(key: str) -> str:
+    """A key as it would stand in TOML: quoted where it is not bare."""
+    bare = key.replace("_", "").replace("-", "")
+    return key if bare.isascii() and bare.isalnum() else f'"{quoted(key)}"'

@@ -1,0 +1,177 @@
+"""Checks over more than one key of a scene: what contradicts what, and what would work."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from raytrace.scene.problems import Problem, quoted
+
+PLATE_FORMATS = ("JPEG", "PNG", "TIFF")
+PLATE_MOST_PIXELS = 100_000_000
+
+
+def sun_rules(sun, given):
+    """By angles or by place and time, whole, not both, and above the horizon."""
+    angles = {"elevation_deg", "azimuth_deg"}
+    place = {"latitude_deg", "longitude_deg", "time"}
+    has_angles, has_place = angles & given, (place | {"height_m"}) & given
+    if has_angles and has_place:
+        key = sorted(has_place)[0]
+        yield Problem(key, getattr(sun, key), "contradicts the sun's angles", "either the angles or place and time")
+    elif has_place:
+        for key in sorted(place - given):
+            yield Problem(key, None, "is missing", "latitude_deg, longitude_deg and time together")
+    else:
+        for key in sorted(angles - given):
+            yield Problem(
+                key, None, "is missing", "elevation_deg and azimuth_deg, or latitude_deg, longitude_deg and time"
+            )
+    if sun.time is not None and sun.time.tzinfo is None:
+        yield Problem("time", sun.time, "has no offset from UTC", "a date-time such as 2026-10-04T16:20:00+01:00")
+    if sun.elevation_deg is not None and sun.elevation_deg <= 0:
+        yield Problem("elevation_deg", sun.elevation_deg, "puts the sun below the horizon", "above 0 to 90")
+
+
+def rain_rules(rain, given):
+    """Limits in order, and the keys that the size law wants."""
+    if rain.far_m <= rain.near_m:
+        yield Problem("far_m", rain.far_m, f"is not beyond near_m = {rain.near_m:g}", f"more than {rain.near_m:g}")
+    elif "edge_m" in given and rain.edge_m > rain.far_m - rain.near_m:
+        most = rain.far_m - rain.near_m
+        yield Problem("edge_m", rain.edge_m, "is wider than the curtain can hold", f"0 to {most:g}")
+    if rain.top_m <= rain.bottom_m:
+        yield Problem("top_m", rain.top_m, f"is not above bottom_m = {rain.bottom_m:g}", f"more than {rain.bottom_m:g}")
+    elif "edge_top_m" in given and rain.edge_top_m > rain.top_m - rain.bottom_m:
+        most = rain.top_m - rain.bottom_m
+        yield Problem("edge_top_m", rain.edge_top_m, "is wider than the curtain is high", f"0 to {most:g}")
+    start, end = rain.azimuth_from_deg, rain.azimuth_to_deg
+    if start is not None and end is not None and start == end:
+        yield Problem("azimuth_to_deg", end, "equals azimuth_from_deg", "another azimuth; for all round, 360 more")
+    wants = {
+        "single": {"diameter_mm"},
+        "ulbrich_1983": {"median_diameter_mm"},
+        "marshall_palmer_1948": set(),
+    }
+    optional = {"ulbrich_1983": {"shape_mu"}}
+    law = rain.size_law
+    for key in sorted(wants[law] - given):
+        yield Problem(key, None, f'is missing: size_law "{law}" needs it', "a diameter in mm")
+    allowed = wants[law] | optional.get(law, set())
+    for key in sorted({"diameter_mm", "median_diameter_mm", "shape_mu"} & given - allowed):
+        works = [name for name in wants if key in wants[name] | optional.get(name, set())]
+        yield Problem(key, getattr(rain, key), f'means nothing to size_law "{law}"', f'size_law = "{works[0]}"')
+    if rain.extinction_per_km is not None and "rain_rate_mm_h" in given:
+        yield Problem("rain_rate_mm_h", rain.rain_rate_mm_h, "contradicts extinction_per_km", "one of the two")
+    if "salinity_permille" in given and rain.water == "fresh":
+        yield Problem("salinity_permille", rain.salinity_permille, "means nothing to fresh water", 'water = "sea"')
+    if rain.refractive_index is not None and "water" in given:
+        yield Problem("refractive_index", rain.refractive_index, "contradicts water", "one of the two")
+
+
+def sky_rules(sky, given):
+    """Keys that belong to one model of the sky only."""
+    belongs = {
+        "cie_type": "cie",
+        "illuminance_lx": "cie",
+        "luminance_cd_m2": "uniform",
+        "plate": "plate",
+        "plate_white_cd_m2": "plate",
+    }
+    for key, model in belongs.items():
+        if key in given and sky.model != model:
+            yield Problem(key, getattr(sky, key), f'means nothing to model "{sky.model}"', f'model = "{model}"')
+    if sky.model == "plate" and sky.plate is None:
+        yield Problem("plate", None, 'is missing: model "plate" needs it', "the path of a JPEG, PNG or TIFF picture")
+    if sky.model == "plate" and sky.cloud is not None:
+        yield Problem("cloud", None, 'means nothing to model "plate"', "no table [sky.cloud]")
+    if sky.cloud is not None and sky.cloud.top_deg <= sky.cloud.base_deg:
+        base = sky.cloud.base_deg
+        yield Problem("cloud.top_deg", sky.cloud.top_deg, f"is not above base_deg = {base:g}", f"more than {base:g}")
+
+
+def ground_rules(ground, given):
+    """Hills before the end of the land."""
+    if ground.reaches_m <= ground.hills_from_m:
+        works = f"more than {ground.hills_from_m:g}"
+        yield Problem("reaches_m", ground.reaches_m, f"is not beyond hills_from_m = {ground.hills_from_m:g}", works)
+
+
+def camera_rules(camera, given):
+    """What the lens can do, and one way to expose."""
+    field = camera.field_of_view_deg
+    if camera.projection == "perspective" and field is not None and field > 160:
+        yield Problem("field_of_view_deg", field, "is too wide for a perspective lens", 'up to 160, or "fisheye"')
+    if camera.projection == "panorama":
+        if field is not None:
+            yield Problem("field_of_view_deg", field, "is always 360 for a panorama", "no such key")
+        if camera.width_px != 2 * camera.height_px:
+            works = f"width_px = {2 * camera.height_px}, twice the height"
+            yield Problem("width_px", camera.width_px, "is not a full panorama's", works)
+    manual = {"f_number", "shutter_s", "iso"}
+    if manual & given:
+        for key in sorted(manual - given):
+            yield Problem(key, None, "is missing", "f_number, shutter_s and iso together, or none for automatic")
+        for key in sorted({"exposure_percentile", "exposure_level"} & given):
+            yield Problem(key, getattr(camera, key), "contradicts the manual exposure", "one of the two")
+
+
+RULES = {
+    "sun": sun_rules,
+    "rain": rain_rules,
+    "sky": sky_rules,
+    "ground": ground_rules,
+    "camera": camera_rules,
+}
+"""Of each table: a generator of problems from the table and the keys that were given."""
+
+
+def across_rules(tables, plate_folder):
+    """Checks over more than one table; the tables are those that are sound by themselves."""
+    sky, ground = tables.get("sky"), tables.get("ground")
+    if sky is not None and sky.model == "plate":
+        if ground is not None and ground.cover != "none":
+            yield Problem("ground.cover", ground.cover, "would hide the plate", 'cover = "none" or no table [ground]')
+        if sky.plate is not None:
+            yield from plate_problems(sky.plate, plate_folder)
+
+
+def plate_problems(plate: str, folder: Path | None):
+    """Whether a plate is a picture file inside the scene's folder, of a size that can be read."""
+    key = "sky.plate"
+    formats = "a JPEG, PNG or TIFF picture"
+    if folder is None:
+        yield Problem(key, plate, "has no folder to start from", "a scene that is read from a file")
+        return
+    try:
+        path = (folder / plate).resolve()
+        inside = path.is_relative_to(folder.resolve())
+        is_file = path.is_file()
+    except (OSError, ValueError) as problem:
+        yield Problem(key, plate, f"cannot be looked up: {quoted(str(problem))}", formats)
+        return
+    if not inside:
+        yield Problem(key, plate, "lies outside the scene's folder", "a path below the folder of the scene file")
+        return
+    if not is_file:
+        yield Problem(key, plate, "is not a file", f"{formats}, path from the scene file")
+        return
+    import warnings
+
+    from PIL import Image
+
+    try:
+        with warnings.catch_warnings():
+            # sizes are judged here, by our own limit
+            warnings.simplefilter("ignore", Image.DecompressionBombWarning)
+            with Image.open(path, formats=PLATE_FORMATS) as picture:
+                pixels = picture.width * picture.height
+                if pixels > PLATE_MOST_PIXELS:
+                    size = f"{picture.width}x{picture.height}"
+                    yield Problem(
+                        key, plate, f"has {size} pixels", f"up to {PLATE_MOST_PIXELS // 10**6} million pixels"
+                    )
+                    return
+                picture.load()
+    except Exception as problem:
+        # Pillow's readers raise a dozen kinds of error on damaged files; each means the same here
+        yield Problem(key, plate, f"is no picture that can be read ({quoted(str(problem), 60)})", formats)
