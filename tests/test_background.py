@@ -94,6 +94,21 @@ def test_given_illuminance_scales_the_sky_and_the_skylight(wanted):
     assert sky_of(plain, 10, 40)[1] == pytest.approx(light.diffuse_horizontal_lx / math.pi, rel=1e-6)
 
 
+@pytest.mark.parametrize(
+    ("sky", "expected_lx"),
+    # Exact: a uniform hemisphere of luminance L gives pi L on level ground.
+    [
+        ({"model": "uniform", "luminance_cd_m2": 700.0}, 700 * math.pi),
+        ({"model": "uniform"}, 2000 * math.pi),
+        ({"model": "black"}, 0.0),
+    ],
+)
+def test_the_sky_that_is_drawn_lights_the_ground(sky, expected_lx):
+    _, light = background(sky)
+    assert light.diffuse_horizontal_lx == pytest.approx(expected_lx)
+    assert light.diffuse_horizontal @ colour.xyz_weights(WAVELENGTH)[:, 1] == pytest.approx(expected_lx)
+
+
 # Cloud
 
 
