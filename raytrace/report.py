@@ -88,10 +88,9 @@ def _camera_line(camera, antisolar_azimuth_deg) -> str:
     azimuth = antisolar_azimuth_deg if camera.azimuth_deg is None else camera.azimuth_deg
     field = {"perspective": 90.0, "fisheye": 180.0, "panorama": 360.0}[camera.projection]
     field = field if camera.field_of_view_deg is None else camera.field_of_view_deg
-    return (
-        f"{camera.projection}, {field:g} deg, {camera.width_px}x{camera.height_px} px, "
-        f"looks {camera.elevation_deg:g} deg up at azimuth {azimuth % 360:.2f} deg, roll {camera.roll_deg:g} deg, {camera.height_m:g} m above ground"
-    )
+    lens = f"{camera.projection}, {field:g} deg, {camera.width_px}x{camera.height_px} px"
+    pointing = f"{camera.elevation_deg:g} deg up at azimuth {azimuth % 360:.2f} deg, roll {camera.roll_deg:g} deg"
+    return f"{lens}, looks {pointing}, {camera.height_m:g} m above ground"
 
 
 def _exposure_line(camera) -> str:
