@@ -106,7 +106,14 @@ def run_all(function, tasks, *, threads: int | None = None, on_done=None) -> Non
         Threads; all cores unless given.
     on_done : callable, optional
         Called without arguments after each task, from this thread.
+
+    Raises
+    ------
+    ValueError
+        If `threads` is below 1.
     """
+    if threads is not None and threads < 1:
+        raise ValueError(f"threads={threads!r} given; whole numbers from 1 work")
     tasks = list(tasks)
     threads = max(1, min(threads or core_count(), len(tasks)))
     if threads == 1:

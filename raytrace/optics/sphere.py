@@ -113,6 +113,8 @@ def trace_sphere(
 def _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm):
     index = np.atleast_1d(np.asarray(index, dtype=np.complex128))
     n, k = cast.f64(index.real, name="index", ndim=1), cast.f64(index.imag, name="index", ndim=1)
+    if n.size == 0:
+        raise ValueError("no index given; one or more work")
     if not ((n >= _INDEX_RANGE[0]) & (n <= _INDEX_RANGE[1])).all():
         raise ValueError(f"index {n.min():g} to {n.max():g} given; rays are traced for {_INDEX_RANGE[0]} to 4")
     if not ((k >= 0) & (k <= _LARGEST_K)).all():
