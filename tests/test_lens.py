@@ -39,6 +39,11 @@ def test_pixel_direction_pixel(projection, azimuth, elevation, roll, x, y):
     if not inside:
         return
     back_x, back_y, seen = direction_pixels(a_lens, ray)
+    if projection == "panorama":
+        # its first and last column meet, and at the poles all columns do
+        if abs(y - 40) * a_lens.pixel_rad > math.radians(89.9):
+            return
+        back_x = x + (back_x - x + 60) % 120 - 60
     np.testing.assert_allclose([back_x, back_y], [x, y], atol=1e-6)
     # on the very edge rounding may fall either way
     if 1e-6 < x < 120 - 1e-6 and 1e-6 < y < 80 - 1e-6 and math.hypot(x - 60, y - 40) < 40 - 1e-6:
