@@ -88,6 +88,9 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
     problems.extend(across_rules(tables, folder))
     if problems:
         raise InputError(*(problem.line(name) for problem in problems))
+    if tables.get("sky") is not None and tables["sky"].model == "plate":
+        # a plate brings its own ground, and the land that a scene has by default would hide it
+        tables.setdefault("ground", scene_model.Ground(cover="none"))
     scene = scene_model.Scene(**tables)
     scene._folder = None if folder is None else Path(folder)
     return scene

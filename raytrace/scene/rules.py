@@ -7,7 +7,12 @@ from pathlib import Path
 from raytrace.scene.problems import Problem, quoted
 
 PLATE_FORMATS = ("JPEG", "PNG", "TIFF")
-PLATE_MOST_PIXELS = 100_000_000
+# below the size from which Pillow warns
+PLATE_MOST_PIXELS = 80_000_000
+PLATE_MODES = ("1", "L", "LA", "P", "PA", "RGB", "RGBA", "RGBX", "CMYK", "YCbCr")
+"""Pillow's modes of eight bits a channel or less; deeper ones it would cut off, not scale."""
+SUN_YEARS = (1900, 2100)
+"""Years in which the earth's rotation is known, or foreseen, well enough for the sun's place."""
 
 
 def sun_rules(sun, given):
@@ -28,6 +33,9 @@ def sun_rules(sun, given):
             )
     if sun.time is not None and sun.time.tzinfo is None:
         yield Problem("time", sun.time, "has no offset from UTC", "a date-time such as 2026-10-04T16:20:00+01:00")
+    first, last = SUN_YEARS
+    if sun.time is not None and not first <= sun.time.year <= last:
+        yield Problem("time", sun.time, "is too far off to say where the sun stands", f"a year from {first} to {last}")
     if sun.elevation_deg is not None and sun.elevation_deg <= 0:
         yield Problem("elevation_deg", sun.elevation_deg, "puts the sun below the horizon", "above 0 to 90")
 
@@ -82,6 +90,8 @@ def sky_rules(sky, given):
             yield Problem(key, getattr(sky, key), f'means nothing to model "{sky.model}"', f'model = "{model}"')
     if sky.model == "plate" and sky.plate is None:
         yield Problem("plate", None, 'is missing: model "plate" needs it', "the path of a JPEG, PNG or TIFF picture")
+    if sky.model == "plate" and "colour_temperature_k" in given:
+        yield Problem("colour_temperature_k", sky.colour_temperature_k, 'means nothing to model "plate"', "no such key")
     if sky.model == "plate" and sky.cloud is not None:
         yield Problem("cloud", None, 'means nothing to model "plate"', "no table [sky.cloud]")
     if sky.cloud is not None and sky.cloud.top_deg <= sky.cloud.base_deg:
@@ -170,6 +180,9 @@ def plate_problems(plate: str, folder: Path | None):
                     yield Problem(
                         key, plate, f"has {size} pixels", f"up to {PLATE_MOST_PIXELS // 10**6} million pixels"
                     )
+                    return
+                if picture.mode not in PLATE_MODES:
+                    yield Problem(key, plate, f"has pixels of kind {picture.mode}", f"{formats}, 8 bits a channel")
                     return
                 picture.load()
     except Exception as problem:
