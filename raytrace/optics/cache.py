@@ -1,14 +1,16 @@
 """Traced tables on disk: keyed by everything that determines them, written whole, verified on reading, bounded in size.
 
-A file is one line of JSON (format, key, shapes, SHA-256 of the rest) and then the arrays, little-endian float64 in C
-order. A file that is damaged, cut short, or not ours is left unused with a warning.
+A file is one line of JSON (format, key, shapes, method, rays, seed, SHA-256 of these and of the arrays) and then the
+arrays, little-endian float64 in C order. A file that is damaged, cut short, or not ours is left unused with a warning.
 """
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import json
 import os
+import time
 import warnings
 from pathlib import Path
 
@@ -86,16 +88,17 @@ def load(key: str) -> ScatteringTable | None:
             if sum(count.values()) * 8 != _size(path) - file.tell():
                 raise ValueError("it is cut short")
             data = np.fromfile(file, dtype="<f8")
-        if hashlib.sha256(data).hexdigest() != head["sha256"]:
+        if _digest(head, [data]) != head["sha256"]:
             raise ValueError("its checksum does not hold")
         arrays, at = {}, 0
         for name in _ARRAYS:
             arrays[name] = data[at : at + count[name]].reshape(shapes[name])
             at += count[name]
-        os.utime(path)  # last use, for the bound on size
+        with contextlib.suppress(OSError):  # a cache that can be read but not written is good to read
+            os.utime(path)  # last use, for the bound on size
         index = arrays.pop("index_n") + 1j * arrays.pop("index_k")
         return ScatteringTable(**arrays, index=index, method=head["method"], rays=head["rays"], seed=head["seed"])
-    except (OSError, ValueError, KeyError, TypeError, MemoryError) as problem:
+    except (OSError, ValueError, KeyError, TypeError, MemoryError, RecursionError) as problem:
         warnings.warn(
             f"cache file {path.name} is left unused: {problem}; the table is traced anew", CacheWarning, stacklevel=2
         )
@@ -110,18 +113,15 @@ def store(key: str, table: ScatteringTable) -> None:
     parts = {name: getattr(table, name, None) for name in _ARRAYS}
     parts["index_n"], parts["index_k"] = table.index.real, table.index.imag
     parts = {name: np.ascontiguousarray(value, dtype="<f8") for name, value in parts.items()}
-    digest = hashlib.sha256()
-    for value in parts.values():
-        digest.update(value)
     head = {
         "format": FORMAT,
         "key": key,
         "shapes": {name: value.shape for name, value in parts.items()},
-        "sha256": digest.hexdigest(),
         "method": table.method,
         "rays": table.rays,
         "seed": table.seed,
     }
+    head["sha256"] = _digest(head, parts.values())
 
     def write(file):
         file.write(json.dumps(head).encode() + b"\n")
@@ -135,6 +135,15 @@ def store(key: str, table: ScatteringTable) -> None:
         warnings.warn(f"the table could not be kept in {path.parent}: {problem}", CacheWarning, stacklevel=2)
 
 
+def _digest(head: dict, arrays) -> str:
+    """Checksum of the arrays and of what the first line says, but for the checksum itself."""
+    said = {name: value for name, value in head.items() if name != "sha256"}
+    digest = hashlib.sha256(json.dumps(said, sort_keys=True).encode())
+    for value in arrays:
+        digest.update(value)
+    return digest.hexdigest()
+
+
 def _bound(newest: Path) -> None:
     """Drop the tables used longest ago until the folder is within its limit; the newest stays."""
     files = sorted((p for p in newest.parent.glob("*" + SUFFIX) if p != newest), key=_last_use)
@@ -144,6 +153,10 @@ def _bound(newest: Path) -> None:
             break
         total -= _size(path)
         path.unlink(missing_ok=True)
+    # what a killed process left half written; a living one is done within the hour
+    for part in newest.parent.glob(".*.part"):
+        if _last_use(part) < time.time() - 3600:
+            part.unlink(missing_ok=True)
 
 
 def _size(path: Path) -> int:
