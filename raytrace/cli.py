@@ -11,6 +11,7 @@ import warnings
 from pathlib import Path
 
 from raytrace.errors import InputError
+from raytrace.scene.problems import quoted
 
 DONE, FAILED, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
 
@@ -23,12 +24,23 @@ class _Parser(argparse.ArgumentParser):
 
     def _hint(self, message):
         words = [word.split("=")[0] for word in message.replace("'", " ").split() if word.startswith("-")]
-        options = [option for action in self._actions for option in action.option_strings]
+        options = _option_strings(self)
         for word in words if "unrecognized" in message else ():
             close = difflib.get_close_matches(word, options, n=1)
             if close:
                 return f" (nearest: {close[0]})"
         return ""
+
+
+def _option_strings(parser) -> list[str]:
+    """Options of a parser and of its commands."""
+    found = []
+    for action in parser._actions:
+        found += action.option_strings
+        if isinstance(action, argparse._SubParsersAction):
+            for command in action.choices.values():
+                found += _option_strings(command)
+    return found
 
 
 def run(arguments: list[str]) -> int:
@@ -45,10 +57,18 @@ def run(arguments: list[str]) -> int:
         0 done, 2 bad input, 1 anything else, 130 interrupted.
     """
     try:
-        options = _parse(arguments)
-        with warnings.catch_warnings():
-            warnings.showwarning = _show_warning
-            return options.command(options)
+        try:
+            options = _parse(arguments)
+            with warnings.catch_warnings():
+                warnings.showwarning = _show_warning
+                status = options.command(options)
+        except SystemExit as leaving:
+            # --help and --version
+            status = DONE if leaving.code in (None, 0) else BAD_INPUT
+        if sys.stdout is not None:
+            # what cannot be printed must come to light here, and not when the interpreter ends
+            sys.stdout.flush()
+        return status
     except InputError as problem:
         for line in problem.problems:
             print(line, file=sys.stderr)
@@ -61,9 +81,6 @@ def run(arguments: list[str]) -> int:
     except KeyboardInterrupt:
         print("raytrace: interrupted; no file was written", file=sys.stderr)
         return INTERRUPTED
-    except SystemExit as leaving:
-        # --help and --version
-        return DONE if leaving.code in (None, 0) else BAD_INPUT
     except MemoryError:
         print("raytrace: out of memory; what works: a smaller --size, fewer optics.bins", file=sys.stderr)
         return FAILED
@@ -118,6 +135,9 @@ def _render(options) -> int:
     threads = None if options.threads is None else _threads(options.threads)
     output = _output(options.output, options.scene)
     scene = _with_options(load_scene(options.scene), options)
+    plate = scene.plate_path()
+    if plate is not None and output.exists() and output.samefile(plate):
+        raise InputError(f"{quoted(str(output))}: is the plate of the scene; what works: another name")
     from raytrace.preflight import preflight
 
     preflight(scene, name=options.scene)
@@ -128,9 +148,9 @@ def _render(options) -> int:
         frame.save(output)
     except OSError as problem:
         raise InputError(
-            f"{output}: cannot be written ({problem.strerror or problem}); what works: another folder"
+            f"{quoted(str(output), 200)}: cannot be written ({problem.strerror or problem}); what works: another folder"
         ) from None
-    print(f"{output}: {frame.summary()}")
+    print(f"{quoted(str(output), 200)}: {frame.summary()}")
     return DONE
 
 
@@ -163,17 +183,22 @@ def _info(options) -> int:
 def _output(given: str | None, scene: str) -> Path:
     """Where the picture goes, checked before any work is done."""
     path = Path(given) if given is not None else Path(Path(scene).stem + ".png")
+    name, folder = quoted(str(path), 200), quoted(str(path.parent), 200)
     if path.suffix.lower() != ".png":
-        raise InputError(f"{_one_line(str(path))}: is no name of a PNG file; what works: a name that ends in .png")
-    if path.is_dir():
-        raise InputError(f"{path}: is a folder; what works: the name of a file in it")
-    if not path.parent.is_dir():
-        raise InputError(f"{_one_line(str(path))}: there is no folder {path.parent}; what works: a folder that exists")
-    if not os.access(path.parent, os.W_OK):
-        raise InputError(f"{path}: the folder {path.parent} may not be written; what works: -o in another folder")
-    with contextlib.suppress(OSError):
-        if path.samefile(scene):
-            raise InputError(f"{path}: is the scene file itself; what works: another name")
+        raise InputError(f"{name}: is no name of a PNG file; what works: a name that ends in .png")
+    try:
+        if path.is_dir():
+            raise InputError(f"{name}: is a folder; what works: the name of a file in it")
+        if not path.parent.is_dir():
+            raise InputError(f"{name}: there is no folder {folder}; what works: a folder that exists")
+        if not os.access(path.parent, os.W_OK):
+            raise InputError(f"{name}: the folder {folder} may not be written; what works: -o in another folder")
+        if path.exists() and Path(scene).exists() and path.samefile(scene):
+            raise InputError(f"{name}: is the scene file itself; what works: another name")
+    except OSError as problem:
+        raise InputError(
+            f"{name}: cannot be written ({problem.strerror}); what works: a shorter or other name"
+        ) from None
     return path
 
 

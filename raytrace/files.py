@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-import tempfile
+import secrets
 from pathlib import Path
 
 
@@ -24,7 +24,9 @@ def write_atomic(path, content) -> None:
         If the folder cannot be written or the disk is full; nothing is left behind.
     """
     path = Path(path)
-    handle, name = tempfile.mkstemp(prefix=f".{path.name[:80]}.", suffix=".part", dir=path.parent)
+    name = path.parent / f".raytrace-{secrets.token_hex(8)}.part"
+    # made by `os.open` and not by `tempfile`, so that it gets the mode that any new file would
+    handle = os.open(name, os.O_WRONLY | os.O_CREAT | os.O_EXCL | getattr(os, "O_BINARY", 0), 0o666)
     try:
         with os.fdopen(handle, "wb") as file:
             if callable(content):
@@ -33,11 +35,7 @@ def write_atomic(path, content) -> None:
                 file.write(content)
             file.flush()
             os.fsync(file.fileno())
-        # mkstemp makes files private; a result gets the mode that any new file would
-        umask = os.umask(0)
-        os.umask(umask)
-        os.chmod(name, 0o666 & ~umask)
         os.replace(name, path)
     except BaseException:
-        Path(name).unlink(missing_ok=True)
+        name.unlink(missing_ok=True)
         raise

@@ -7,9 +7,11 @@ from pathlib import Path
 
 from raytrace.errors import InputError
 from raytrace.optics.scattering import wavelengths_nm
+from raytrace.scene.problems import quoted
 
 # Measured with 1280x720 and 7680x4320 pictures (tests/benchmarks); rounded up
 FIXED_BYTES = 420e6
+BYTES_PER_PLATE_PIXEL = 40
 BYTES_PER_PIXEL = 36
 BYTES_PER_LAYER_PIXEL = 12
 TABLES_AT_ONCE = 3.2
@@ -23,7 +25,7 @@ def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
     InputError
         If the sun is below the horizon at the place and time given, or the picture needs more memory than is free.
     """
-    problems = []
+    problems, name = [], quoted(name, 200)
     if scene.sun.time is not None:
         from raytrace.light.sun import sun_place
 
@@ -40,7 +42,11 @@ def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
         works = "a machine with more free memory"
         if spare > 0:
             shrink = (spare / _per_pixel(scene, layers) / (width * height)) ** 0.5
-            works = f"{int(width * shrink)}x{int(height * shrink)} px or smaller"
+            rows = int(height * shrink)
+            # a panorama stays twice as wide as high
+            columns = 2 * rows if scene.camera.projection == "panorama" else int(width * shrink)
+            if min(rows, columns) >= 8:
+                works = f"{columns}x{rows} px or smaller"
         problems.append(
             f"{name}: camera.width_px: {width}x{height} px would need {need / 1e9:.1f} GB of memory and "
             f"{free / 1e9:.1f} GB are free; what works: {works}"
@@ -56,7 +62,18 @@ def needed_bytes(scene, *, layers: bool = False) -> float:
     # per block of rays a histogram of its own
     tracing = 32 * 8 * 2 * optics.paths * optics.bins
     pixels = scene.camera.width_px * scene.camera.height_px
-    return FIXED_BYTES + max(TABLES_AT_ONCE * table / 2, table + tracing) + pixels * _per_pixel(scene, layers)
+    optical = max(TABLES_AT_ONCE * table / 2, table + tracing)
+    return FIXED_BYTES + optical + _plate_bytes(scene) + pixels * _per_pixel(scene, layers)
+
+
+def _plate_bytes(scene) -> float:
+    """What reading a plate takes: its pixels as bytes, as encoded and as linear numbers."""
+    if scene.plate_path() is None:
+        return 0.0
+    from PIL import Image
+
+    with Image.open(scene.plate_path()) as picture:
+        return float(picture.width * picture.height * BYTES_PER_PLATE_PIXEL)
 
 
 def _per_pixel(scene, layers: bool) -> float:

@@ -33,7 +33,7 @@ def scene_report(scene, *, name: str) -> str:
         ("scene", name),
         ("sha-256", scene_hash(scene)),
         ("sun", f"{light.sun.elevation_deg:.2f} deg up at azimuth {light.sun.azimuth_deg:.2f} deg, apparent"),
-        ("antisolar point", f"{elevation:.2f} deg up at azimuth {azimuth:.2f} deg"),
+        ("antisolar point", f"{-elevation:.2f} deg below the horizon at azimuth {azimuth:.2f} deg"),
         ("air mass", f"{light.airmass:.2f}"),
         ("direct sunlight", f"{light.direct_normal_lx:,.0f} lx square to the sun"),
         ("diffuse skylight", f"{light.diffuse_horizontal_lx:,.0f} lx on level ground"),

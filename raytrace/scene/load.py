@@ -17,6 +17,10 @@ from raytrace.scene.rules import RULES, across_rules
 
 LARGEST_BYTES = 1 << 20
 MOST_CURTAINS = 8
+MOST_PROBLEMS = 200
+"""Problems of one file that are told; what is beyond is counted."""
+MOST_DOTS_A_LINE = 100
+"""The parser's time grows with the square of a dotted key's parts, and a megabyte of them would take hours."""
 _TABLES = {
     "sun": scene_model.Sun,
     "air": scene_model.Air,
@@ -27,6 +31,7 @@ _TABLES = {
     "camera": scene_model.Camera,
 }
 _NEEDED = ("sun", "rain", "camera")
+_UNTOLD = Problem("", None, "", "")
 
 
 def load_scene(path) -> scene_model.Scene:
@@ -71,9 +76,10 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
     """
     problems: list[Problem] = []
     tables: dict = {}
-    for key in data:
-        if key not in _TABLES:
-            problems.append(Problem(_key(key), None, "is no table of a scene", nearest(key, list(_TABLES))))
+    strangers = [key for key in data if key not in _TABLES]
+    for key in strangers[:MOST_PROBLEMS]:
+        problems.append(Problem(_key(key), None, "is no table of a scene", nearest(key, list(_TABLES), _keys())))
+    problems.extend([_UNTOLD] * len(strangers[MOST_PROBLEMS:]))
     for table, kind in _TABLES.items():
         if table not in data:
             if table in _NEEDED:
@@ -87,7 +93,14 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
             tables[table] = sound
     problems.extend(across_rules(tables, folder))
     if problems:
-        raise InputError(*(problem.line(name) for problem in problems))
+        told = [problem for problem in problems if problem is not _UNTOLD][:MOST_PROBLEMS]
+        lines = [problem.line(name) for problem in told]
+        if len(problems) > len(told):
+            more = len(problems) - len(told)
+            lines.append(
+                f"{quoted(name, 200)}: has {more} problems more; what works: to mend the {len(told)} above first"
+            )
+        raise InputError(*lines)
     if tables.get("sky") is not None and tables["sky"].model == "plate":
         # a plate brings its own ground, and the land that a scene has by default would hide it
         tables.setdefault("ground", scene_model.Ground(cover="none"))
@@ -126,13 +139,26 @@ def _read(path: Path, name: str) -> dict:
     if content.startswith(b"\xef\xbb\xbf"):
         refuse("begins with a byte order mark", "UTF-8 without one")
     try:
-        return tomllib.loads(content.decode("utf-8"))
+        text = content.decode("utf-8")
     except UnicodeDecodeError as problem:
-        refuse(f"byte {problem.start} is not UTF-8", "a TOML file in UTF-8")
+        line = content.count(b"\n", 0, problem.start) + 1
+        refuse(f"byte {problem.start} (line {line}) is not UTF-8", "a TOML file in UTF-8")
+    for number, line in enumerate(text.split("\n"), 1):
+        if line.count(".") > MOST_DOTS_A_LINE and not line.lstrip().startswith("#"):
+            refuse(
+                f"line {number} has {line.count('.')} dots, so it is nested too deeply or has too many numbers",
+                f"lines of up to {MOST_DOTS_A_LINE} dots",
+            )
+    try:
+        return tomllib.loads(text)
     except RecursionError:
         refuse("is nested too deeply", "tables and keys as in scenes/README.md")
-    except ValueError as problem:
+    except tomllib.TOMLDecodeError as problem:
         refuse(f"is not TOML: {quoted(str(problem), 120)}", "TOML 1.0, as in scenes/double_bow.toml")
+    except ValueError as problem:
+        # well-formed, but past what a number or a date can be: more than 4300 digits, the 31st of February
+        why = "has a number of too many digits" if "digits" in str(problem) else f"has {quoted(str(problem), 120)}"
+        refuse(why, "numbers and dates as in scenes/README.md")
 
 
 def _curtains(data, problems: list[Problem]):
@@ -169,8 +195,9 @@ def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[P
     try:
         sound = kind.model_validate(data)
     except ValidationError as failure:
-        for error in failure.errors(include_url=False):
-            problems.append(_problem(where, kind, data, error))
+        errors = failure.errors(include_url=False)
+        problems.extend(_problem(where, kind, error) for error in errors[:MOST_PROBLEMS])
+        problems.extend([_UNTOLD] * len(errors[MOST_PROBLEMS:]))
         return None
     except (OverflowError, RecursionError):
         problems.append(
@@ -182,20 +209,20 @@ def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[P
     return None if found else sound
 
 
-def _problem(where: str, kind: type[BaseModel], data, error) -> Problem:
+def _problem(where: str, kind: type[BaseModel], error) -> Problem:
     """A problem in our words from one of pydantic's."""
     location = [part for part in error["loc"] if isinstance(part, str)]
     owner, field = kind, None
-    for part in location:
+    for depth, part in enumerate(location, 1):
         field = owner.model_fields.get(part)
         inner = _table_in(field)
-        if inner is not None and part != location[-1]:
+        if inner is not None and depth < len(location):
             owner = inner
     key = ".".join([where, *map(_key, location)])
     value = error["input"]
     if error["type"] == "extra_forbidden":
-        others = {name: list(model.model_fields) for name, model in _TABLES.items() if model is not owner}
-        return Problem(key, value, "is no key of this table", nearest(location[-1], list(owner.model_fields), others))
+        works = nearest(location[-1], list(owner.model_fields), _keys(owner))
+        return Problem(key, value, "is no key of this table", works)
     if error["type"] == "missing":
         return Problem(key, None, "is missing", _works(field))
     if _table_in(field) is not None:
@@ -207,6 +234,12 @@ def _problem(where: str, kind: type[BaseModel], data, error) -> Problem:
     if error["type"] == "finite_number":
         return Problem(key, value, "is not finite", _works(field))
     return Problem(key, value, "is out of range", _works(field))
+
+
+def _keys(owner=None) -> dict[str, list[str]]:
+    """Keys by table, without those of one table."""
+    tables = {**_TABLES, "sky.cloud": scene_model.Cloud}
+    return {name: list(kind.model_fields) for name, kind in tables.items() if kind is not owner}
 
 
 def _table_in(field) -> type[BaseModel] | None:

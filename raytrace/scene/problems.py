@@ -52,7 +52,9 @@ def in_toml(value) -> str:
     if isinstance(value, float):
         if math.isnan(value) or math.isinf(value):
             return str(value)
-        return f"{value:g}" if float(f"{value:g}") == value else repr(value)
+        text = f"{value:g}" if float(f"{value:g}") == value else repr(value)
+        # so that it is told from a whole number
+        return text if set(text) & set(".e") else text + ".0"
     if isinstance(value, int):
         # a whole number can have any number of digits, and Python refuses to print very long ones
         return str(value) if abs(value) < 10**20 else f"a whole number of {value.bit_length()} bits"
@@ -94,10 +96,11 @@ def nearest(word: str, valid, elsewhere: dict[str, list[str]] | None = None) -> 
     elsewhere : dict of str to list of str, optional
         Keys of the other tables, by table.
     """
-    close = difflib.get_close_matches(word[:80], list(valid), n=1, cutoff=0.6)
+    # a key of another table is more likely in the wrong place than misspelt
+    homes = [f"[{table}]" for table, keys in (elsewhere or {}).items() if word in keys]
+    if homes:
+        return f'"{word}" in table {" or ".join(homes)}'
+    close = difflib.get_close_matches(word[:80].lower(), list(valid), n=1, cutoff=0.6)
     if close:
         return f'"{close[0]}"'
-    for table, keys in (elsewhere or {}).items():
-        if word in keys:
-            return f'"{word}" in table [{table}]'
     return "one of " + ", ".join(valid)
