@@ -278,6 +278,7 @@ def field_range(field) -> str:
         for name in ("le", "lt"):
             if getattr(rule, name, None) is not None:
                 high = getattr(rule, name)
+    low, high = (int(bound) if bound == int(bound) else bound for bound in (low, high))
     return f"{open_low}{in_toml(low)} to {in_toml(high)}"
 
 

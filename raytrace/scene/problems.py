@@ -30,7 +30,8 @@ class Problem(NamedTuple):
 
     def line(self, file: str) -> str:
         """The problem as one line of text."""
-        given = "" if self.given is None else f" {in_toml(self.given)}"
+        # what stands in a table or an array is too long for a line, and the rest of the line says that it is one
+        given = "" if self.given is None or isinstance(self.given, (dict, list)) else f" {in_toml(self.given)}"
         return f"{quoted(file, 200)}: {quoted(self.key, 120)}:{given} {self.why}; what works: {self.works}"
 
 
