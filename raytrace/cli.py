@@ -19,6 +19,10 @@ DONE, FAILED, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
 class _Parser(argparse.ArgumentParser):
     """Argument errors as one line, with the nearest word that would work."""
 
+    def __init__(self, **options):
+        # an abbreviation that works today would be ambiguous with the next option
+        super().__init__(**options, allow_abbrev=False)
+
     def error(self, message):
         raise InputError(f"{self.prog}: {_one_line(message)}{self._hint(message)}; what works: {self.prog} --help")
 
@@ -85,7 +89,7 @@ def run(arguments: list[str]) -> int:
         print("raytrace: out of memory; what works: a smaller --size, fewer optics.bins", file=sys.stderr)
         return FAILED
     except Exception as problem:
-        if os.environ.get("RAYTRACE_DEBUG"):
+        if os.environ.get("RAYTRACE_DEBUG", "0") != "0":
             raise
         print(f"raytrace: {type(problem).__name__}: {_one_line(str(problem))}", file=sys.stderr)
         return FAILED
@@ -219,7 +223,9 @@ def _with_options(scene, options):
         if not (options.seed.isdecimal() and len(options.seed) < 25):
             raise InputError(f"--seed: {_one_line(options.seed)!r} is no seed; what works: a whole number from 0")
         data["optics"] = data.get("optics", {}) | {"seed": int(options.seed)}
-    return scene_from_dict(data, folder=scene._folder, name=options.scene)
+    # a problem now is the command line's and not the file's
+    changes = [f"--{key} {_one_line(getattr(options, key))}" for key in ("size", "seed") if getattr(options, key)]
+    return scene_from_dict(data, folder=scene._folder, name=f"{options.scene} with {' '.join(changes)}")
 
 
 def _threads(text: str) -> int:

@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-import os
-from pathlib import Path
-
 from raytrace.errors import InputError
+from raytrace.memory import free_bytes
 from raytrace.optics.scattering import wavelengths_nm
 from raytrace.scene.problems import quoted
 
@@ -79,28 +77,3 @@ def _plate_bytes(scene) -> float:
 def _per_pixel(scene, layers: bool) -> float:
     each = BYTES_PER_PIXEL + (12 if scene.sky.model == "plate" else 0)
     return each + (BYTES_PER_LAYER_PIXEL * (scene.optics.paths + 6) if layers else 0)
-
-
-def free_bytes() -> float:
-    """Memory that this process may still take: the machine's, or its control group's where that is less [B]."""
-    free = float("inf")
-    try:
-        for line in Path("/proc/meminfo").read_text().splitlines():
-            if line.startswith("MemAvailable:"):
-                free = int(line.split()[1]) * 1024.0
-    except (OSError, ValueError, IndexError):
-        pass
-    if free == float("inf"):
-        try:
-            free = float(os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE"))
-        except (OSError, ValueError, AttributeError):
-            return free
-    for limit, used in (
-        ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory.current"),
-        ("/sys/fs/cgroup/memory/memory.limit_in_bytes", "/sys/fs/cgroup/memory/memory.usage_in_bytes"),
-    ):
-        try:
-            free = min(free, float(Path(limit).read_text()) - float(Path(used).read_text()))
-        except (OSError, ValueError):
-            continue
-    return free

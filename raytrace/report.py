@@ -118,6 +118,7 @@ def machine_report() -> str:
         "numba",
         "llvmlite",
         "scipy",
+        "colour-science",
         "pvlib",
         "pandas",
         "pillow",
@@ -125,7 +126,10 @@ def machine_report() -> str:
         "tqdm",
         "platformdirs",
     ):
-        lines.append((package, importlib.metadata.version(package)))
+        try:
+            lines.append((package, importlib.metadata.version(package)))
+        except importlib.metadata.PackageNotFoundError:
+            lines.append((package, "not installed"))
     kernels = kernel_cache_folder()
     files, size = table_cache_size()
     lines += [

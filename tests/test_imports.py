@@ -111,7 +111,7 @@ def test_stages_import_only_to_their_left():
 
 
 def test_helpers_import_no_stage():
-    for name in ("errors", "colour", "cast", "cores", "files", "jit", "random_stream"):
+    for name in ("errors", "colour", "cast", "cores", "files", "jit", "memory", "random_stream"):
         stages = {other.split(".")[1] for other in _imports(PACKAGE / f"{name}.py") if "." in other}
         assert stages & set(LEFT) == set(), name
 
