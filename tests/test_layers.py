@@ -13,8 +13,9 @@ from raytrace.camera.lens import direction_pixels, pixel_directions
 from raytrace.frame import render
 from raytrace.light.spectrum import illumination
 from raytrace.optics.scattering import wavelengths_nm
+from raytrace.sky import radiance
 from raytrace.sky import rain as rain_stage
-from raytrace.sky.radiance import layer_names
+from raytrace.sky.radiance import layer_names, prepare_view
 from raytrace.sky.terrain import plain_distance
 
 ROUND_THE_EYE = {"near_m": 0.0, "azimuth_from_deg": 0.0, "azimuth_to_deg": 360.0, "bottom_m": -2000.0, "top_m": 4000.0}
@@ -212,6 +213,51 @@ def test_air_veils_the_ground():
         # the mean over the pixel's height
         assert frame.layers["veil"][row, column, 1] == pytest.approx(expected, rel=0.02)
         assert frame.layers["ground"][row, column, 1] == 0
+
+
+def test_rain_dims_the_veil_and_the_ground_behind_it():
+    keys = {
+        "sky": UNIFORM,
+        "ground": {"cover": "plain"},
+        "air": {"visibility_km": 20.0},
+        "camera": {"height_m": 400.0, "elevation_deg": -10.0, "field_of_view_deg": 20.0},
+    }
+    rain = {**HARD, "extinction_per_km": 1.0, "near_m": 300.0, "far_m": 800.0, "bottom_m": -100.0}
+    clear, rainy = (
+        render(make_scene(SUN, rain=table, **keys), layers=True) for table in ({"extinction_per_km": 0.0}, rain)
+    )
+    row, column = 16, 24
+    level = np.hypot(*rays(clear)[0][row, column, :2])
+    for name in ("ground", "veil"):
+        share = rainy.layers[name][row, column, 1] / clear.layers[name][row, column, 1]
+        assert share == pytest.approx(math.exp(-0.5 / level), rel=1e-3), name
+    # what the rain takes from the view it fills itself
+    lit = rainy.layers["skylit_rain"][row, column, 1]
+    assert 0 < lit <= 3000 * (1 - math.exp(-0.5 / level)) * (1 + 1e-6)
+
+
+# The table of angles
+
+
+def test_orders_are_looked_up_between_the_middles_of_bins():
+    # A table whose entries are its own angles comes back as the angle of the view, at the coarsest bins allowed.
+    scene = make_scene(SUN, rain={**HARD, **ROUND_THE_EYE, "extinction_per_km": 1e-3}, sky={"model": "black"})
+    middles = np.arange(180) + 0.5
+    orders = np.broadcast_to(middles[None, :, None], (3, 180, 3)) * np.array([1.0, 2.0, 3.0])[:, None, None]
+    light = illumination(scene, wavelengths_nm(scene.optics))
+    view = prepare_view(scene, light, [np.ascontiguousarray(orders)], [np.ones(180)], 0.01)
+    theta = np.array([0.5, 0.7, 33.3, 90.0, 137.922, 179.5])
+    towards = around((250.0, 25.0), 0.0, 0.0)[0]
+    side = np.cross(towards, [0.0, 0.0, 1.0])
+    side /= np.linalg.norm(side)
+    angle = np.radians(theta)[:, None]
+    directions = np.cos(angle) * towards + np.sin(angle) * side
+    layers = radiance.layered_radiance(view, directions, np.ones(6, dtype=bool), 0.01)[:, 6:, 0]
+    np.testing.assert_allclose(layers / layers[:, :1], [[1.0, 2.0, 3.0]] * 6, rtol=1e-9)
+    # the same amount of rain in every direction but for its slant: compare through two tables
+    flat = view._replace(orders=np.ones_like(view.orders))
+    lit = radiance.layered_radiance(flat, directions, np.ones(6, dtype=bool), 0.01)[:, 6, 0]
+    np.testing.assert_allclose(layers[:, 0] / lit, theta, rtol=1e-6)
 
 
 # Whatever a scene may say

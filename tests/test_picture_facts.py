@@ -80,7 +80,7 @@ def test_red_edges_in_the_eight_bits(both_bows):
     # the outermost part of the primary and the innermost of the secondary, as the file shows them
     red, _, blue = both_bows.rgb.T
     for low, high in ((42.1, 42.6), (50.1, 50.7)):
-        assert both_bows.mean(low, high, red) > 2 * both_bows.mean(low, high, blue) + 20
+        assert both_bows.mean(low, high, red) > 1.5 * both_bows.mean(low, high, blue) + 10
     # towards the bows' other sides blue gains on red
     for edge, far in (((42.1, 42.6), (40.3, 40.8)), ((50.1, 50.7), (53.2, 53.8))):
         ratio = [both_bows.mean(*part, blue) / both_bows.mean(*part, red) for part in (edge, far)]
@@ -111,7 +111,7 @@ def test_dark_band_width():
 def test_common_radii(both_bows):
     # "the primary stands about 42 deg and the secondary about 51 deg from the antisolar point"
     assert both_bows.peak_deg(both_bows.luminance, 38, 45) == pytest.approx(42, abs=0.6)
-    assert both_bows.peak_deg(both_bows.luminance, 48, 56) == pytest.approx(51, abs=0.6)
+    assert both_bows.peak_deg(both_bows.luminance, 48, 56) == pytest.approx(51, abs=1.0)
 
 
 def test_each_further_bow_is_fainter():

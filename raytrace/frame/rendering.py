@@ -58,8 +58,8 @@ def render(
     wavelength = wavelengths_nm(scene.optics)
     tables, phases, rays = [], [], 0
     with contextlib.suppress(ImportError):
-        # pvlib loads it, and it silences a warning of its own while it loads. Warning filters are shared by all threads,
-        # and the compiler in this thread sets them too, so it is loaded here.
+        # pvlib loads it, and it silences a warning of its own while it loads. Filters of warnings belong to all threads
+        # and the compiler in this one sets them too, so it is loaded here.
         import requests  # noqa: F401
     # the spectrum's libraries take a second to load, which the first table's tracing or reading can overlap
     with ThreadPoolExecutor(1) as pool:
