@@ -8,7 +8,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 from skies import angle_deg
 
-from raytrace.camera.lens import PROJECTIONS, direction_pixels, make_lens, pixel_directions, row_directions
+from raytrace.camera.lens import (
+    PROJECTIONS,
+    azimuth_span,
+    direction_pixels,
+    make_lens,
+    pixel_directions,
+    row_directions,
+)
 from raytrace.light.sun import direction
 from raytrace.scene.model import Camera
 
@@ -163,3 +170,28 @@ def test_panorama_is_equirectangular():
     # a picture taller than half its width is black above and below
     tall = lens("panorama", width_px=100, height_px=80)
     assert list(pixel_directions(tall, 50.0, [14.0, 16.0, 64.0, 66.0])[1]) == [False, True, True, False]
+
+
+@pytest.mark.parametrize("projection", PROJECTIONS)
+@given(
+    azimuth=st.floats(0, 360),
+    elevation=angles,
+    roll=st.floats(-180, 180),
+    field=st.sampled_from([1.0, 40.0, 90.0, 140.0]),
+)
+def test_azimuth_span_holds_every_pixel(projection, azimuth, elevation, roll, field):
+    a_lens = lens(
+        projection, azimuth_deg=azimuth, elevation_deg=elevation, roll_deg=roll, field_of_view_deg=field, width_px=60
+    )
+    first, width = azimuth_span(a_lens)
+    assert 0 < width <= 2 * math.pi
+    directions, inside = row_directions(a_lens, 0, 80)
+    x, y, _ = directions[inside].T
+    past = (np.arctan2(x, y) - first) % (2 * math.pi)
+    assert (past <= width + 1e-9).all()
+
+
+def test_azimuth_span_of_a_narrow_view_is_narrow():
+    first, width = azimuth_span(lens(azimuth_deg=1.0, field_of_view_deg=40.0))
+    assert math.degrees(width) < 60
+    assert -40 < math.degrees(first) < 0

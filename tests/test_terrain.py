@@ -160,6 +160,16 @@ def test_relief_and_seed():
     assert np.std(high) > 1e-3
 
 
+@pytest.mark.parametrize("first", [-0.4, 0.3, 2.0, 5.8, 6.6])
+def test_land_of_a_narrow_view_is_the_same_land(hills, first):
+    part = make_terrain(Ground(cover="meadow", **HILLY), EYE, PIXEL, (first, 1.0))
+    for azimuth in np.linspace(first, first + 1.0, 23):
+        assert horizon_slope(part, azimuth) == horizon_slope(hills, azimuth)
+        assert ground_distance(part, azimuth, -0.008) == ground_distance(hills, azimuth, -0.008)
+    # and no more of it than is seen, give or take a row
+    assert (part.slope[:-1, -1] > -1e29).mean() < 1.0 / (2 * math.pi) + 0.01
+
+
 def test_threads_do_not_change_the_land():
     one, two = (make_terrain(Ground(cover="fields", **HILLY), EYE, PIXEL, threads=n).slope for n in (1, 2))
     np.testing.assert_array_equal(one, two)
