@@ -303,7 +303,7 @@ some_scenes = st.fixed_dictionaries(
 )
 
 
-@settings(max_examples=25, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+@settings(max_examples=15, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 @given(keys=some_scenes)
 def test_every_scene_renders_sound(keys):
     with pytest.MonkeyPatch.context() as patch:
