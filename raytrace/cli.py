@@ -78,9 +78,8 @@ def run(arguments: list[str]) -> int:
             print(line, file=sys.stderr)
         return BAD_INPUT
     except BrokenPipeError:
-        # whoever read our output has gone: what is left in the buffer must not raise again at exit
-        with contextlib.suppress(OSError):
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        # whoever read our output has gone
+        _drop_output()
         return FAILED
     except KeyboardInterrupt:
         print("raytrace: interrupted; no file was written", file=sys.stderr)
@@ -92,7 +91,19 @@ def run(arguments: list[str]) -> int:
         if os.environ.get("RAYTRACE_DEBUG", "0") != "0":
             raise
         print(f"raytrace: {type(problem).__name__}: {_one_line(str(problem))}", file=sys.stderr)
+        _drop_output()
         return FAILED
+
+
+def _drop_output() -> None:
+    """What standard output could not take must not raise once more when the interpreter ends."""
+    if sys.stdout is None:
+        return
+    try:
+        sys.stdout.flush()
+    except (OSError, ValueError):
+        with contextlib.suppress(OSError, ValueError):
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _parse(arguments: list[str]):
