@@ -44,7 +44,11 @@ ONE_PROBLEM = {
     "table for a number": (dict(camera="width_px = {}"), "camera.width_px: is a table", "a whole number"),
     "number for the cloud": (dict(sky="cloud = 3"), "sky.cloud: 3 is a whole number", "a table [sky.cloud]"),
     "huge whole number": (dict(camera=f"width_px = {10**400}"), "camera.width_px: a whole number of 1329 bits", "8 to"),
-    "huge for a float": (dict(air=f"visibility_km = {10**400}"), "air", "number"),
+    "huge for a float": (
+        dict(air=f"visibility_km = {10**400}"),
+        "air.visibility_km: a whole number of 1329 bits is out of",
+        "0.5 to 400",
+    ),
     "huge seed": (dict(optics=f"seed = {2**63}"), "optics.seed: 9223372036854775808 is out", "0 to 92233720368547758"),
     "date for a number": (dict(air="visibility_km = 2026-10-04"), "air.visibility_km: 2026-10-04 is a date", "0.5"),
     "number for a time": (dict(sun=PLACE + "time = 3"), "sun.time: 3 is a whole number", "2026-10-04T16:20:00+01:00"),
@@ -123,6 +127,11 @@ ONE_PROBLEM = {
         "camera.width_px: 200 is not a full panorama's",
         "width_px = 180",
     ),
+    "panorama that is too high": (
+        dict(camera='projection = "panorama"\nheight_px = 30000'),
+        "camera.width_px: 1280 is not a full panorama's",
+        "height_px = 16384 and width_px = 32768",
+    ),
     "two exposures": (
         dict(camera="f_number = 8\nshutter_s = 0.01\niso = 100\nexposure_level = 0.5"),
         "camera.exposure_level: 0.5 contradicts the manual",
@@ -193,9 +202,40 @@ def test_all_problems_of_a_file_are_told_at_once(tmp_path):
             "rain.far_m",
             "rain.top_m",
             "camera.width_px",
+            "camera.iso",
+            "camera.shutter_s",
             "sky.cloud.albedo",
         ]
     )
+
+
+BESIDE_UNSOUND_KEYS = {
+    # tables, and the keys of the problems that are told; what would stand on an unsound value is not among them
+    "partners": (dict(sun="elevation_deg = 95"), ["elevation_deg", "azimuth_deg"]),
+    "typo of the partner": (dict(sun="elevaton_deg = 20\nazimuth_deg = 250"), ["elevaton_deg"]),
+    "near": (dict(rain='near_m = "a"\nfar_m = 300\ntop_m = -3\nedge_m = 19000'), ["near_m", "top_m"]),
+    "bottom": (dict(rain="bottom_m = nan\ntop_m = -5\nedge_top_m = 9000\nfar_m = 3"), ["bottom_m", "far_m"]),
+    "size law": (dict(rain='size_law = "x"\ndiameter_mm = 1\nfar_m = 3'), ["size_law", "far_m"]),
+    "unsound size": (dict(rain='size_law = "single"\ndiameter_mm = 9\nfar_m = 3'), ["diameter_mm", "far_m"]),
+    "water": (dict(rain="water = 5\nsalinity_permille = 3"), ["water"]),
+    "sky's model": (dict(sky='model = "x"\nluminance_cd_m2 = 5'), ["model"]),
+    "cloud": (dict(sky='cloud = 5\nplate = "a.png"'), ["cloud", "plate"]),
+    "reach": (dict(ground="hills_from_m = true\nreaches_m = 200"), ["hills_from_m"]),
+    "lens": (dict(camera="projection = 5\nfield_of_view_deg = 200\nf_number = 8"), ["projection", "iso", "shutter_s"]),
+    "panorama": (dict(camera='projection = "panorama"\nheight_px = 5'), ["height_px"]),
+    "exposure": (
+        dict(camera="f_number = 8\nshutter_s = 0\nexposure_level = 1"),
+        ["iso", "shutter_s", "exposure_level"],
+    ),
+}
+
+
+@pytest.mark.parametrize("case", BESIDE_UNSOUND_KEYS)
+def test_contradictions_are_told_beside_unsound_keys(tmp_path, case):
+    tables, keys = BESIDE_UNSOUND_KEYS[case]
+    (table,) = tables
+    lines = problems(tmp_path, toml(**tables))
+    assert sorted(line.split(":")[0] for line in lines) == sorted(f"{table}.{key}" for key in keys), lines
 
 
 def test_missing_exposure_keys_are_each_told(tmp_path):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import re
 import tomllib
 import typing
 from pathlib import Path
@@ -198,6 +199,7 @@ def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[P
         errors = failure.errors(include_url=False)
         problems.extend(_problem(where, kind, error) for error in errors[:MOST_PROBLEMS])
         problems.extend([_UNTOLD] * len(errors[MOST_PROBLEMS:]))
+        problems.extend(_among_the_sound(table, where, kind, data, errors))
         return None
     except (OverflowError, RecursionError):
         problems.append(
@@ -207,6 +209,19 @@ def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[P
     found = list(RULES[table](sound, sound.model_fields_set)) if table in RULES else []
     problems.extend(problem._replace(key=f"{where}.{problem.key}") for problem in found)
     return None if found else sound
+
+
+def _among_the_sound(table: str, where: str, kind: type[BaseModel], data: dict, errors: list):
+    """Problems between the keys that are sound by themselves, where others of the same table are not."""
+    unsound = {error["loc"][0] for error in errors}
+    misnamed = any(error["type"] == "extra_forbidden" for error in errors)
+    rest = kind.model_validate({key: value for key, value in data.items() if key not in unsound})
+    for problem in RULES[table](rest, set(data)) if table in RULES else ():
+        # an unsound key has its default here, so nothing that stands on its value may be told; and what is missing may
+        # be there under a wrong name
+        stands_on = set(re.findall(r"\w+", f"{problem.key} {problem.why}"))
+        if not stands_on & unsound and not (misnamed and problem.why.startswith("is missing")):
+            yield problem._replace(key=f"{where}.{problem.key}")
 
 
 def _problem(where: str, kind: type[BaseModel], error) -> Problem:
@@ -227,6 +242,9 @@ def _problem(where: str, kind: type[BaseModel], error) -> Problem:
         return Problem(key, None, "is missing", _works(field))
     if _table_in(field) is not None:
         return Problem(key, value, f"is {kind_in_toml(value)}", f"a table [{key}]")
+    if error["type"] == "float_type" and isinstance(value, int) and not isinstance(value, bool):
+        # more than a floating-point number can hold
+        return Problem(key, value, "is out of range", _works(field))
     if error["type"].endswith("_type") or error["type"] in ("int_from_float", "datetime_type"):
         return Problem(key, value, f"is {kind_in_toml(value)}", _works(field))
     if error["type"] == "literal_error":

@@ -12,6 +12,9 @@ from typing import Literal
 
 from pydantic import BaseModel, ConfigDict, Field, PrivateAttr
 
+WIDEST_PX = 32_768
+"""Widest and highest picture [px]."""
+
 
 class Table(BaseModel):
     """A table of the scene file: no unknown keys, no infinities, frozen once read."""
@@ -158,8 +161,8 @@ class Camera(Table):
     field_of_view_deg: float | None = Field(
         None, gt=0, le=360, description="perspective: across the width (90); fisheye: across the circle (180) [deg]"
     )
-    width_px: int = Field(1280, ge=8, le=32_768, description="width of the picture [px]")
-    height_px: int = Field(720, ge=8, le=32_768, description="height of the picture [px]")
+    width_px: int = Field(1280, ge=8, le=WIDEST_PX, description="width of the picture [px]")
+    height_px: int = Field(720, ge=8, le=WIDEST_PX, description="height of the picture [px]")
     height_m: float = Field(1.7, ge=0.1, le=12_000, description="height of the camera above its foot [m]")
     exposure_percentile: float = Field(
         99.0, ge=1, le=100, description="automatic exposure: this percentile of luminance ..."

@@ -1,9 +1,14 @@
-"""Checks over more than one key of a scene: what contradicts what, and what would work."""
+"""Checks over more than one key of a scene: what contradicts what, and what would work.
+
+Each problem names, as its key or in its reason, every key on whose value it stands: where one of those is unsound by
+itself, the problem is not told.
+"""
 
 from __future__ import annotations
 
 from pathlib import Path
 
+from raytrace.scene.model import WIDEST_PX
 from raytrace.scene.problems import Problem, quoted
 
 PLATE_FORMATS = ("JPEG", "PNG", "TIFF")
@@ -46,12 +51,14 @@ def rain_rules(rain, given):
         yield Problem("far_m", rain.far_m, f"is not beyond near_m = {rain.near_m:g}", f"more than {rain.near_m:g}")
     elif "edge_m" in given and rain.edge_m > rain.far_m - rain.near_m:
         most = rain.far_m - rain.near_m
-        yield Problem("edge_m", rain.edge_m, "is wider than the curtain can hold", f"0 to {most:g}")
+        yield Problem("edge_m", rain.edge_m, "is wider than the curtain from near_m to far_m", f"0 to {most:g}")
     if rain.top_m <= rain.bottom_m:
         yield Problem("top_m", rain.top_m, f"is not above bottom_m = {rain.bottom_m:g}", f"more than {rain.bottom_m:g}")
     elif "edge_top_m" in given and rain.edge_top_m > rain.top_m - rain.bottom_m:
         most = rain.top_m - rain.bottom_m
-        yield Problem("edge_top_m", rain.edge_top_m, "is wider than the curtain is high", f"0 to {most:g}")
+        yield Problem(
+            "edge_top_m", rain.edge_top_m, "is wider than the curtain from bottom_m to top_m", f"0 to {most:g}"
+        )
     start, end = rain.azimuth_from_deg, rain.azimuth_to_deg
     if start is not None and end is not None and start == end:
         yield Problem("azimuth_to_deg", end, "equals azimuth_from_deg", "another azimuth; for all round, 360 more")
@@ -110,13 +117,16 @@ def camera_rules(camera, given):
     """What the lens can do, and one way to expose."""
     field = camera.field_of_view_deg
     if camera.projection == "perspective" and field is not None and field > 160:
-        yield Problem("field_of_view_deg", field, "is too wide for a perspective lens", 'up to 160, or "fisheye"')
+        yield Problem("field_of_view_deg", field, 'is too wide for projection "perspective"', 'up to 160, or "fisheye"')
     if camera.projection == "panorama":
         if field is not None:
             yield Problem("field_of_view_deg", field, "is always 360 for a panorama", "no such key")
         if camera.width_px != 2 * camera.height_px:
-            works = f"width_px = {2 * camera.height_px}, twice the height"
-            yield Problem("width_px", camera.width_px, "is not a full panorama's", works)
+            rows = min(camera.height_px, WIDEST_PX // 2)
+            works = f"width_px = {2 * rows}, twice the height"
+            if rows < camera.height_px:
+                works = f"height_px = {rows} and {works}"
+            yield Problem("width_px", camera.width_px, "is not a full panorama's, twice height_px", works)
     manual = {"f_number", "shutter_s", "iso"}
     if manual & given:
         for key in sorted(manual - given):
