@@ -8,9 +8,21 @@ import sys
 
 import pytest
 
+from raytrace import files
 from raytrace.files import write_atomic
 
+NAMELESS = hasattr(os, "O_TMPFILE") and os.path.isdir(files._OPEN_FILES)
 POSIX = pytest.mark.skipif(os.name != "posix", reason="modes and signals of POSIX")
+
+
+@pytest.fixture(autouse=True, params=[True, False], ids=["nameless", "hidden"])
+def way(request, monkeypatch):
+    """Both ways to write: to a file without a name, and to a hidden one where the system has no such files."""
+    if request.param and not NAMELESS:
+        pytest.skip("this system has no files without a name")
+    if not request.param:
+        monkeypatch.delattr(os, "O_TMPFILE", raising=False)
+    return request.param
 
 
 def names(folder) -> list[str]:
@@ -71,6 +83,27 @@ def test_a_failure_in_the_callback_leaves_the_old_file_and_nothing_else(tmp_path
     assert old is None or path.read_bytes() == old
 
 
+def test_bytes_are_on_the_disk_before_they_take_the_name(tmp_path, monkeypatch):
+    steps, fsync, replace = [], os.fsync, os.replace
+    monkeypatch.setattr(os, "fsync", lambda handle: (steps.append("fsync"), fsync(handle)))
+    monkeypatch.setattr(os, "replace", lambda old, new: (steps.append("replace"), replace(old, new)))
+    write_atomic(tmp_path / "a.bin", b"new")
+    assert steps == ["fsync", "replace"]
+
+
+def test_the_old_content_stays_while_the_new_is_written(tmp_path):
+    path, seen = tmp_path / "a.bin", []
+    path.write_bytes(b"old")
+
+    def look(file):
+        file.write(b"new")
+        file.flush()
+        seen.append(path.read_bytes())
+
+    write_atomic(path, look)
+    assert seen == [b"old"] and path.read_bytes() == b"new"
+
+
 @pytest.mark.parametrize("step", ["fsync", "replace"])
 def test_a_full_disk_leaves_the_old_file_and_nothing_else(tmp_path, monkeypatch, step):
     path = tmp_path / "a.bin"
@@ -111,7 +144,9 @@ def test_a_folder_in_the_files_place(tmp_path):
 
 
 SLOWLY = """
-import sys, time
+import os, sys
+if sys.argv[2] == "False":
+    vars(os).pop("O_TMPFILE", None)
 from raytrace.files import write_atomic
 
 def write(file):
@@ -128,21 +163,38 @@ write_atomic(sys.argv[1], write)
 @POSIX
 @pytest.mark.parametrize("old", [b"old", None])
 @pytest.mark.parametrize("kill", [True, False])
-def test_kill_in_the_middle_leaves_the_old_file_whole(tmp_path, old, kill):
+def test_kill_in_the_middle_leaves_the_old_file_whole(tmp_path, old, kill, way):
     path = tmp_path / "a.bin"
     if old is not None:
         path.write_bytes(old)
-    command = [sys.executable, "-c", SLOWLY, str(path)]
+    command = [sys.executable, "-c", SLOWLY, str(path), str(way)]
     with subprocess.Popen(command, stdin=subprocess.PIPE, stdout=subprocess.PIPE) as process:
         assert process.stdout.readline() == b"half\n"
-        assert len(names(tmp_path)) == (1 if old is None else 2)
+        beside = [name for name in names(tmp_path) if name != "a.bin"]
+        # where files without a name can be had, a killed process leaves nothing; else a hidden file, never a result
+        assert len(beside) == (0 if way else 1) and all(name.startswith(".") for name in beside)
         if kill:
             process.send_signal(signal.SIGKILL)
             process.wait()
             assert process.returncode == -signal.SIGKILL
             assert not path.exists() if old is None else path.read_bytes() == old
+            # nobody can tidy up after a kill, but what is left must not pass for a result
+            assert all(name == "a.bin" or name.startswith(".") for name in names(tmp_path))
         else:
             # the control: left alone, the same process does write the file
             process.communicate(b"\n")
             assert process.returncode == 0 and path.read_bytes() == b"n" * 2_000_000
             assert names(tmp_path) == ["a.bin"]
+
+
+def test_a_file_system_without_nameless_files(tmp_path, monkeypatch):
+    real = os.open
+
+    def refuse(path, flags, mode):
+        if flags & getattr(os, "O_TMPFILE", 0) == getattr(os, "O_TMPFILE", -1):
+            raise OSError(errno.EOPNOTSUPP, os.strerror(errno.EOPNOTSUPP))
+        return real(path, flags, mode)
+
+    monkeypatch.setattr(os, "open", refuse)
+    write_atomic(tmp_path / "a.bin", b"one")
+    assert names(tmp_path) == ["a.bin"] and (tmp_path / "a.bin").read_bytes() == b"one"
