@@ -9,6 +9,7 @@ from scene_files import toml, write
 
 from raytrace.cli import run
 from raytrace.scene import load, model
+from raytrace.scene.fields import table_in
 
 BOUNDED = settings(
     derandomize=True,
@@ -119,7 +120,7 @@ def test_any_toml(scene, tmp_path, capsys):
 
 def within(field):
     """Values that a field takes by itself, its ends among them."""
-    if load._table_in(field):
+    if table_in(field):
         return st.just({"albedo": 0.2})
     choices = [c for c in getattr(field.annotation, "__args__", ()) if isinstance(c, str)]
     if choices:

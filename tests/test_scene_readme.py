@@ -7,6 +7,7 @@ import pytest
 from scene_files import SCENES, write
 
 from raytrace.scene import load, model
+from raytrace.scene.fields import field_range, table_in, works_for
 from raytrace.scene.load import load_scene
 
 
@@ -43,11 +44,11 @@ def test_the_readme_holds_every_key_with_range_and_default(table):
     assert list(rows) == list(kind.model_fields)
     for key, field in kind.model_fields.items():
         unit, span, default, meaning = rows[key]
-        works = "" if load._table_in(field) else load._works(field)
-        if load._table_in(field):
+        works = "" if table_in(field) else works_for(field)
+        if table_in(field):
             assert span == "table"
         elif works.startswith(("a number from ", "a whole number from ")):
-            assert span == load.field_range(field), key
+            assert span == field_range(field), key
         elif works.startswith('"'):
             assert span == works, key
         else:

@@ -6,14 +6,14 @@ import hashlib
 import json
 import re
 import tomllib
-import typing
 from pathlib import Path
 
 from pydantic import BaseModel, ValidationError
 
 from raytrace.errors import InputError
 from raytrace.scene import model as scene_model
-from raytrace.scene.problems import Problem, in_toml, kind_in_toml, nearest, quoted
+from raytrace.scene.fields import table_in, works_for
+from raytrace.scene.problems import Problem, kind_in_toml, nearest, quoted
 from raytrace.scene.rules import RULES, across_rules
 
 LARGEST_BYTES = 1 << 20
@@ -230,7 +230,7 @@ def _problem(where: str, kind: type[BaseModel], error) -> Problem:
     owner, field = kind, None
     for depth, part in enumerate(location, 1):
         field = owner.model_fields.get(part)
-        inner = _table_in(field)
+        inner = table_in(field)
         if inner is not None and depth < len(location):
             owner = inner
     key = ".".join([where, *map(_key, location)])
@@ -239,65 +239,25 @@ def _problem(where: str, kind: type[BaseModel], error) -> Problem:
         works = nearest(location[-1], list(owner.model_fields), _keys(owner))
         return Problem(key, value, "is no key of this table", works)
     if error["type"] == "missing":
-        return Problem(key, None, "is missing", _works(field))
-    if _table_in(field) is not None:
+        return Problem(key, None, "is missing", works_for(field))
+    if table_in(field) is not None:
         return Problem(key, value, f"is {kind_in_toml(value)}", f"a table [{key}]")
     if error["type"] == "float_type" and isinstance(value, int) and not isinstance(value, bool):
         # more than a floating-point number can hold
-        return Problem(key, value, "is out of range", _works(field))
+        return Problem(key, value, "is out of range", works_for(field))
     if error["type"].endswith("_type") or error["type"] in ("int_from_float", "datetime_type"):
-        return Problem(key, value, f"is {kind_in_toml(value)}", _works(field))
+        return Problem(key, value, f"is {kind_in_toml(value)}", works_for(field))
     if error["type"] == "literal_error":
-        return Problem(key, value, "is none of the choices", _works(field))
+        return Problem(key, value, "is none of the choices", works_for(field))
     if error["type"] == "finite_number":
-        return Problem(key, value, "is not finite", _works(field))
-    return Problem(key, value, "is out of range", _works(field))
+        return Problem(key, value, "is not finite", works_for(field))
+    return Problem(key, value, "is out of range", works_for(field))
 
 
 def _keys(owner=None) -> dict[str, list[str]]:
     """Keys by table, without those of one table."""
     tables = {**_TABLES, "sky.cloud": scene_model.Cloud}
     return {name: list(kind.model_fields) for name, kind in tables.items() if kind is not owner}
-
-
-def _table_in(field) -> type[BaseModel] | None:
-    """The model behind a field that is a table of its own."""
-    if field is None:
-        return None
-    for kind in (field.annotation, *typing.get_args(field.annotation)):
-        if isinstance(kind, type) and issubclass(kind, BaseModel):
-            return kind
-    return None
-
-
-def _works(field) -> str:
-    """What a field takes, in words."""
-    kinds = [kind for kind in (field.annotation, *typing.get_args(field.annotation)) if kind is not type(None)]
-    choices = [c for kind in kinds if typing.get_origin(kind) is typing.Literal for c in typing.get_args(kind)]
-    if typing.get_origin(field.annotation) is typing.Literal:
-        choices = list(typing.get_args(field.annotation))
-    if choices:
-        return " or ".join(in_toml(choice) for choice in choices)
-    if str in kinds:
-        return "a string"
-    if scene_model.dt.datetime in kinds:
-        return "a date-time with its offset, such as 2026-10-04T16:20:00+01:00"
-    return f"{'a whole number' if int in kinds else 'a number'} from {field_range(field)}"
-
-
-def field_range(field) -> str:
-    """Range of a number, as `0 to 90` or `above 0 to 300`."""
-    low = high = None
-    open_low = ""
-    for rule in field.metadata:
-        for name in ("ge", "gt"):
-            if getattr(rule, name, None) is not None:
-                low, open_low = getattr(rule, name), "above " if name == "gt" else ""
-        for name in ("le", "lt"):
-            if getattr(rule, name, None) is not None:
-                high = getattr(rule, name)
-    low, high = (int(bound) if bound == int(bound) else bound for bound in (low, high))
-    return f"{open_low}{in_toml(low)} to {in_toml(high)}"
 
 
 def _key(key: str) -> str:
