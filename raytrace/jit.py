@@ -93,6 +93,20 @@ def kernel(function=None, *, inline: bool = False):
         numba.config.CACHE_DIR = before
 
 
+def _first_call(function, task) -> None:
+    """Call a kernel that may have to be compiled, with pairs of like operations put into vector instructions.
+
+    numba leaves that pass out by default; the tracer's two polarisations are such pairs, and gain a seventh. The
+    setting is numba's own and global, so it is set for this moment only.
+    """
+    before = numba.config.SLP_VECTORIZE
+    numba.config.SLP_VECTORIZE = 1
+    try:
+        function(*task)
+    finally:
+        numba.config.SLP_VECTORIZE = before
+
+
 def run_all(function, tasks, *, threads: int | None = None, on_done=None) -> None:
     """Call `function(*task)` for every task on a pool of threads and wait for all.
 
@@ -116,17 +130,17 @@ def run_all(function, tasks, *, threads: int | None = None, on_done=None) -> Non
         raise ValueError(f"threads={threads!r} given; whole numbers from 1 work")
     tasks = list(tasks)
     threads = max(1, min(threads or core_count(), len(tasks)))
+    if not getattr(function, "signatures", True) and tasks:
+        # a kernel that has not run yet: the first task runs alone, so that it is compiled once and not by every thread
+        _first_call(function, tasks.pop(0))
+        if on_done:
+            on_done()
     if threads == 1:
         for task in tasks:
             function(*task)
             if on_done:
                 on_done()
         return
-    if not getattr(function, "signatures", True):
-        # a kernel that has not run yet: the first task runs alone, so that it is compiled once and not by every thread
-        function(*tasks.pop(0))
-        if on_done:
-            on_done()
     with ThreadPoolExecutor(threads) as pool:
         pending = {pool.submit(function, *task) for task in tasks}
         try:

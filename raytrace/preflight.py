@@ -5,7 +5,7 @@ from __future__ import annotations
 from raytrace.errors import InputError
 from raytrace.memory import free_bytes
 from raytrace.optics.scattering import wavelengths_nm
-from raytrace.scene.problems import quoted
+from raytrace.scene.problems import in_toml, quoted
 
 # Measured with 1280x720 and 7680x4320 pictures (tests/benchmarks); rounded up
 FIXED_BYTES = 420e6
@@ -21,7 +21,8 @@ def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
     Raises
     ------
     InputError
-        If the sun is below the horizon at the place and time given, or the picture needs more memory than is free.
+        If the sun is below the horizon at the place and time given, the plate is gone, or the picture needs more memory
+        than is free.
     """
     problems, name = [], quoted(name, 200)
     if scene.sun.time is not None:
@@ -33,6 +34,14 @@ def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
                 f"{name}: sun.time: {scene.sun.time.isoformat()} puts the sun {-sun.elevation_deg:.1f} deg below the "
                 "horizon at this place; what works: a time by day"
             )
+    plate = scene.plate_path()
+    if scene.sky.model == "plate" and (plate is None or not plate.is_file()):
+        given = "none" if scene.sky.plate is None else in_toml(scene.sky.plate)
+        problems.append(
+            f"{name}: sky.plate: {given} is not a file, or has no folder to start from; what works: a scene that is "
+            "read from its file, with the picture still in place"
+        )
+        raise InputError(*problems)
     need, free = needed_bytes(scene, layers=layers), free_bytes()
     if need > free:
         width, height = scene.camera.width_px, scene.camera.height_px

@@ -21,7 +21,7 @@ def pytest_configure(config):
     (home / "raytrace").mkdir()
     # the kernels' machine code lies in folders named by a hash of all sources, so it may outlive one run of the tests;
     # where links cannot be made it is compiled once a run
-    if config.cache is not None:
+    if getattr(config, "cache", None) is not None:
         with contextlib.suppress(OSError):
             (home / "raytrace" / "kernels").symlink_to(config.cache.mkdir("kernels"), target_is_directory=True)
 

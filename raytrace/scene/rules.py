@@ -195,6 +195,9 @@ def plate_problems(plate: str, folder: Path | None):
                     yield Problem(key, plate, f"has pixels of kind {picture.mode}", f"{formats}, 8 bits a channel")
                     return
                 picture.load()
+    except Image.DecompressionBombError:
+        # raised on opening, from twice the size at which Pillow warns
+        yield Problem(key, plate, "has far too many pixels", f"up to {PLATE_MOST_PIXELS // 10**6} million pixels")
     except Exception as problem:
         # Pillow's readers raise a dozen kinds of error on damaged files; each means the same here
         yield Problem(key, plate, f"is no picture that can be read ({quoted(str(problem), 60)})", formats)

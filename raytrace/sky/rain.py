@@ -23,13 +23,15 @@ VIEW_STEPS = 24
 
 # Columns of the array of curtains, one row a curtain; those from OUTER_NEAR on follow from the ones before
 EXTINCTION, NEAR, FAR, BOTTOM, TOP, EDGE, EDGE_TOP, AZIMUTH, HALF, EDGE_AZIMUTH = range(10)
-OUTER_NEAR, OUTER_FAR, OUTER_BOTTOM, OUTER_TOP, PER_METRE_OUT, PER_METRE_UP = range(10, 16)
+OUTER_NEAR, OUTER_FAR, OUTER_BOTTOM, OUTER_TOP, PER_METRE_OUT, PER_METRE_UP, EDGE_NEAR, EDGE_BOTTOM = range(10, 18)
+# Rain that reaches the ground goes on below the level of the camera's foot, where the land may lie lower
+_BELOW_GROUND_M = 100.0
 
 
 class Curtains(NamedTuple):
     """State of all curtains as kernels take it."""
 
-    shape: np.ndarray  # (curtains, 16) extinction [1/m], limits [m], azimuth of the middle, half width, edge [rad] ...
+    shape: np.ndarray  # (curtains, 18) extinction [1/m], limits [m], azimuth of the middle, half width, edge [rad] ...
     sun: tuple  # unit vector to the sun
     sun_depth: np.ndarray  # (curtains, *_GRID) optical depth from a point of the curtain to the sun
     haze: float  # extinction of the air along the view [1/m]
@@ -52,11 +54,12 @@ def azimuth_window(shape, c, x, y):
 @kernel
 def level_window(shape, c, r, z):
     """Share of curtain c's density left by its limits of distance and height."""
-    e, t = 0.5 * shape[c, EDGE], 0.5 * shape[c, EDGE_TOP]
+    e, t = 0.5 * shape[c, EDGE_NEAR], 0.5 * shape[c, EDGE_BOTTOM]
     density = smoothstep(shape[c, NEAR] - e, shape[c, NEAR] + e, r)
-    density *= 1.0 - smoothstep(shape[c, FAR] - e, shape[c, FAR] + e, r)
     if density > 0.0:
         density *= smoothstep(shape[c, BOTTOM] - t, shape[c, BOTTOM] + t, z)
+        e, t = 0.5 * shape[c, EDGE], 0.5 * shape[c, EDGE_TOP]
+        density *= 1.0 - smoothstep(shape[c, FAR] - e, shape[c, FAR] + e, r)
         density *= 1.0 - smoothstep(shape[c, TOP] - t, shape[c, TOP] + t, z)
     return density
 
@@ -275,24 +278,31 @@ def make_curtains(scene, extinction_per_km, sun_vector, haze_per_m: float, *, th
     """
     sun = tuple(float(v) for v in sun_vector)
     antisolar_deg = math.degrees(math.atan2(-sun[0], -sun[1]))
-    shape = np.zeros((len(scene.rain), 16))
+    shape = np.zeros((len(scene.rain), 18))
     for row, rain, beta in zip(shape, scene.rain, extinction_per_km, strict=True):
         start, end = azimuth_limits_deg(rain, antisolar_deg)
+        near, far, bottom, top = rain.near_m, rain.far_m, rain.bottom_m, rain.top_m
+        # rain that begins at the camera or reaches the ground has no edge there
+        edge_near = rain.edge_m if near > 0.0 else 0.0
+        near = near if near > 0.0 else -1.0
+        edge_bottom = rain.edge_top_m if bottom > 0.0 else 0.0
+        bottom = bottom if bottom > 0.0 else bottom - _BELOW_GROUND_M
         row[:OUTER_NEAR] = (
             beta * 1e-3,
-            rain.near_m,
-            rain.far_m,
-            rain.bottom_m,
-            rain.top_m,
+            near,
+            far,
+            bottom,
+            top,
             rain.edge_m,
             rain.edge_top_m,
             math.radians(0.5 * (start + end)),
             math.radians(0.5 * (end - start)),
             math.radians(rain.edge_deg),
         )
-        near, far = max(rain.near_m - 0.5 * rain.edge_m, 0.0), rain.far_m + 0.5 * rain.edge_m
-        bottom, top = rain.bottom_m - 0.5 * rain.edge_top_m, rain.top_m + 0.5 * rain.edge_top_m
-        row[OUTER_NEAR:] = near, far, bottom, top, (_GRID[1] - 1) / (far - near), (_GRID[2] - 1) / (top - bottom)
+        near, far = max(near - 0.5 * edge_near, 0.0), far + 0.5 * rain.edge_m
+        bottom, top = bottom - 0.5 * edge_bottom, top + 0.5 * rain.edge_top_m
+        steps = (_GRID[1] - 1) / (far - near), (_GRID[2] - 1) / (top - bottom)
+        row[OUTER_NEAR:] = near, far, bottom, top, *steps, edge_near, edge_bottom
     depth = np.zeros((len(shape), *_GRID))
     tasks = [(shape, sun, c, i, depth) for c in range(len(shape)) for i in range(_GRID[0])]
     run_all(fill_sun_depth, tasks, threads=threads)
