@@ -167,9 +167,9 @@ class Camera(Table):
     height_px: int = Field(720, ge=8, le=WIDEST_PX, description="height of the picture [px]")
     height_m: float = Field(1.7, ge=0.1, le=12_000, description="height of the camera above its foot [m]")
     exposure_percentile: float = Field(
-        99.0, ge=1, le=100, description="automatic exposure: this percentile of luminance ..."
+        99.5, ge=1, le=100, description="automatic exposure: this percentile of luminance ..."
     )
-    exposure_level: float = Field(0.8, gt=0, le=1, description="... is put at this share of white (linear)")
+    exposure_level: float = Field(0.6, gt=0, le=1, description="... is put at this share of white (linear)")
     f_number: float | None = Field(None, ge=0.5, le=128, description="manual exposure: f-number")
     shutter_s: float | None = Field(None, ge=1e-6, le=3600, description="manual exposure: exposure time [s]")
     iso: float | None = Field(None, ge=1, le=1e6, description="manual exposure: ISO speed")
