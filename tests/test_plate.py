@@ -10,6 +10,8 @@ from scene_files import plate_scene, problems, sound_plate, write
 
 from raytrace.cli import _with_options
 from raytrace.errors import InputError
+from raytrace.preflight import preflight
+from raytrace.scene import model
 from raytrace.scene.load import load_scene, scene_from_dict, scene_hash
 
 
