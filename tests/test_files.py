@@ -175,3 +175,17 @@ def test_a_file_system_without_nameless_files(tmp_path, monkeypatch):
     monkeypatch.setattr(os, "open", refuse)
     write_atomic(tmp_path / "a.bin", b"one")
     assert names(tmp_path) == ["a.bin"] and (tmp_path / "a.bin").read_bytes() == b"one"
+
+
+def test_the_old_file_stands_until_the_new_one_is_on_the_disk(tmp_path, monkeypatch):
+    path, steps = tmp_path / "a.bin", []
+    path.write_bytes(b"old")
+
+    def watch(step):
+        real = getattr(os, step)
+        monkeypatch.setattr(os, step, lambda *a: (steps.append((step, path.read_bytes())), real(*a)))
+
+    watch("fsync")
+    watch("replace")
+    write_atomic(path, b"new")
+    assert steps == [("fsync", b"old"), ("replace", b"old")] and path.read_bytes() == b"new"
