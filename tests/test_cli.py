@@ -189,7 +189,7 @@ def test_render_writes_beside_us_and_ends_with_one_line(quick, capsys, tmp_path)
     out, err = capsys.readouterr()
     assert err == "" and sorted(os.listdir(tmp_path)) == ["a.png", "a.toml"]
     # 21 wavelengths of 1000 rays and a few more, so that the blocks are alike: 380 to 780 nm by 20
-    number, exposure = r"[\d.e+]+", r"auto \(99 % of pixels below 0\.8 of white\)"
+    number, exposure = r"[\d.e+]+", r"auto \(99\.5 % of pixels below 0\.6 of white\)"
     assert re.fullmatch(
         rf"a\.png: 32x24 px, sun 20\.0 deg up at azimuth 250\.0 deg, white {number} cd/m2 by {exposure}, "
         rf"0\.02\d+ M rays, \d+\.\d s, \d+ clipped, \d+ out of gamut\n",
