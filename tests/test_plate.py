@@ -10,7 +10,7 @@ from scene_files import plate_scene, problems, sound_plate, write
 
 from raytrace.cli import _with_options
 from raytrace.errors import InputError
-from raytrace.preflight import preflight
+from raytrace.preflight import needed_bytes, preflight
 from raytrace.scene import model
 from raytrace.scene.load import load_scene, scene_from_dict, scene_hash
 
@@ -108,3 +108,12 @@ def test_a_plate_that_is_gone_is_refused_before_rendering(tmp_path):
             preflight(each, name="a.toml")
         (line,) = caught.value.problems
         assert line.startswith('a.toml: sky.plate: "sky.png" is not a file') and "; what works: " in line
+
+
+def test_a_plate_counts_for_the_memory_that_is_needed(tmp_path):
+    need = []
+    for size in ((40, 30), (4000, 3000)):
+        sound_plate(tmp_path / "sky.png", size=size)
+        need.append(needed_bytes(load_scene(write(tmp_path, plate_scene()))))
+    # at least its pixels as three floating-point numbers of four bytes
+    assert need[1] - need[0] >= 12 * (4000 * 3000 - 40 * 30)

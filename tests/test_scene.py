@@ -97,6 +97,10 @@ ONE_PROBLEM = {
         "rain.azimuth_to_deg: 5.0 equals azimuth_from_deg",
         "360 more",
     ),
+    "far at near": (dict(rain="near_m = 500\nfar_m = 500"), "rain.far_m: 500.0 is not beyond near_m = 500", "500"),
+    "top at bottom": (dict(rain="bottom_m = 50\ntop_m = 50"), "rain.top_m: 50.0 is not above bottom_m = 50", "50"),
+    "flat cloud": (dict(sky__cloud="top_deg = -2"), "sky.cloud.top_deg: -2.0 is not above base_deg = -2", "-2"),
+    "no room for hills": (dict(ground="reaches_m = 2500"), "ground.reaches_m: 2500.0 is not beyond", "than 2500"),
     "single without size": (dict(rain='size_law = "single"'), "rain.diameter_mm: is missing", "a diameter in mm"),
     "gamma without size": (dict(rain='size_law = "ulbrich_1983"'), "rain.median_diameter_mm: is missing", "diameter"),
     "size without law": (dict(rain="diameter_mm = 1"), "rain.diameter_mm: 1.0 means nothing", 'size_law = "single"'),
@@ -265,6 +269,12 @@ NOT_A_SCENE = {
     "endless number": (b"a = " + b"9" * 5000, "has a number of too many digits"),
     "no such day": (b"a = 2026-02-31T00:00:00Z", "is not TOML: Invalid date or datetime (at line 1, column 5)"),
 }
+
+
+def test_a_file_of_one_mebibyte_is_read(tmp_path):
+    text = toml()
+    load_scene(write(tmp_path, text + "#" * (2**20 - len(text))))
+    assert load.LARGEST_BYTES == 2**20
 
 
 @pytest.mark.parametrize("case", NOT_A_SCENE)
