@@ -227,6 +227,10 @@ BESIDE_UNSOUND_KEYS = {
     "reach": (dict(ground="hills_from_m = true\nreaches_m = 200"), ["hills_from_m"]),
     "lens": (dict(camera="projection = 5\nfield_of_view_deg = 200\nf_number = 8"), ["projection", "iso", "shutter_s"]),
     "panorama": (dict(camera='projection = "panorama"\nheight_px = 5'), ["height_px"]),
+    "given but unsound": (
+        dict(camera="f_number = 0\nexposure_level = 1"),
+        ["f_number", "iso", "shutter_s", "exposure_level"],
+    ),
     "exposure": (
         dict(camera="f_number = 8\nshutter_s = 0\nexposure_level = 1"),
         ["iso", "shutter_s", "exposure_level"],
