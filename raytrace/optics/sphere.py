@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
+import itertools
+import threading
+
 import numpy as np
 
 from raytrace import cast
+from raytrace.cores import core_count
 from raytrace.jit import run_all
-from raytrace.optics.sphere_kernels import SphereBlock, merge_blocks, trace_sphere_block
+from raytrace.optics.sphere_kernels import SphereBlock, add_blocks, finish_blocks, trace_sphere_block
 from raytrace.optics.table import ScatteringTable, ring_solid_angle_sr
 from raytrace.random_stream import stream_state
 
@@ -75,29 +79,36 @@ def trace_sphere(
     per_sr = 0.5 / (per_block * ring_solid_angle_sr(edges))
     phase = np.empty((paths, 2, n.size, bins))
     error = np.empty_like(phase)
-    rows = np.empty((BLOCKS, paths, bins, 2))
-    balance = np.empty((BLOCKS, 2, 2))
-    mean, spread = np.empty((2, paths, bins, 2))
-    flat = rows.reshape(BLOCKS, paths, 2 * bins)
     totals = np.empty((n.size, 2))
-    for w in range(n.size):
-        absorption = 0.0
-        if k[w] > 0:
-            absorption = 4.0 * k[w] * np.pi * diameter_mm * 1e6 / wavelength_nm[w]
-        tasks = []
-        for b in range(BLOCKS):
-            stream = stream_state(seed, b, w)
-            block = SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream)
-            tasks.append((block, rows[b], balance[b]))
-        run_all(trace_sphere_block, tasks, threads=threads)
-        merges = [(flat, p, mean[p].reshape(-1), spread[p].reshape(-1)) for p in range(paths)]
-        run_all(merge_blocks, merges, threads=threads)
-        phase[:, :, w], error[:, :, w] = np.moveaxis(mean, 2, 1), np.moveaxis(spread, 2, 1)
-        totals[w] = balance.sum(axis=(0, 2)) / (2.0 * BLOCKS * per_block)
-        if on_done:
-            on_done()
-    phase *= per_sr
-    error *= per_sr
+    stop = threading.Event()
+    # a thread to each wavelength where there are enough of them, else all threads to the blocks of one
+    if threads is not None and threads < 1:
+        raise ValueError(f"threads={threads!r} given; whole numbers from 1 work")
+    cores = min(threads or core_count(), BLOCKS)
+    within = 1 if n.size >= cores else cores
+
+    def one_wavelength(w):
+        absorption = 4.0 * k[w] * np.pi * diameter_mm * 1e6 / wavelength_nm[w] if k[w] > 0 else 0.0
+        blocks = [
+            SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream_state(seed, b, w))
+            for b in range(BLOCKS)
+        ]
+        # a single wavelength is written where it belongs; of several each is a slice with gaps
+        out = [
+            values.reshape(paths, 2, bins) if n.size == 1 else np.empty((paths, 2, bins)) for values in (phase, error)
+        ]
+        totals[w] = _trace_blocks(blocks, per_sr, *out, within, stop)
+        if n.size > 1:
+            phase[:, :, w], error[:, :, w] = out
+
+    if within == 1:
+        _compile(paths)
+        run_all(one_wavelength, [(w,) for w in range(n.size)], threads=threads, on_done=on_done, stop=stop)
+    else:
+        for w in range(n.size):
+            one_wavelength(w)
+            if on_done:
+                on_done()
     return ScatteringTable(
         phase_sr=phase,
         standard_error_sr=error,
@@ -110,6 +121,44 @@ def trace_sphere(
         rays=per_block * BLOCKS,
         seed=int(seed),
     )
+
+
+def _trace_blocks(blocks, per_sr, mean, error, threads, stop):
+    """Trace blocks, one a thread at a time so that histograms stay in the processor's cache, and add them in order.
+
+    Parameters
+    ----------
+    mean, error : (paths, 2, bins) float64
+        Written [sr⁻¹].
+
+    Returns
+    -------
+    (2,) float64
+        Shares left over and absorbed.
+    """
+    paths, bins = blocks[0].paths, blocks[0].bins
+    rows = np.empty((threads, paths, bins, 2))
+    balance = np.empty((len(blocks), 2, 2))
+    sums = np.empty((3, paths, bins, 2))
+    flat_rows, flat_sums = rows.reshape(threads, -1), sums.reshape(3, -1)
+    shares = list(itertools.pairwise(int(v) for v in np.linspace(0, flat_sums.shape[1], threads + 1)))
+    for start in range(0, len(blocks), threads):
+        if stop.is_set():
+            break
+        some = blocks[start : start + threads]
+        tasks = [(block, rows[b], balance[start + b]) for b, block in enumerate(some)]
+        run_all(trace_sphere_block, tasks, threads=threads)
+        adds = [(flat_rows[: len(some)], start > 0, low, high, *flat_sums) for low, high in shares]
+        run_all(add_blocks, adds, threads=threads)
+    finish_blocks(len(blocks), *sums, per_sr, mean, error)
+    return balance.sum(axis=(0, 2)) / (2.0 * len(blocks) * blocks[0].rays)
+
+
+def _compile(paths):
+    """Compile the kernels once, before several threads come to them."""
+    if not (trace_sphere_block.signatures and add_blocks.signatures and finish_blocks.signatures):
+        tiny = [SphereBlock(1.333, 0.0, 1, int(paths), 2, stream_state(0, b)) for b in range(2)]
+        _trace_blocks(tiny, np.ones(2), *np.empty((2, paths, 2, 2)), 1, threading.Event())
 
 
 def _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm):

@@ -18,6 +18,7 @@ from raytrace.jit import kernel
 from raytrace.random_stream import uniform
 
 CHUNK = 128
+_PIECE = 512
 
 
 class SphereBlock(NamedTuple):
@@ -68,7 +69,7 @@ def fold_bin(x, bins):
     return max(k, 0)
 
 
-@kernel
+@kernel(contract=True)
 def trace_sphere_block(block, hist, balance):
     """Trace one block of rays and add their power to the histograms.
 
@@ -163,28 +164,56 @@ def trace_sphere_block(block, hist, balance):
 
 
 @kernel
-def merge_blocks(rows, p, mean, error):
-    """Mean and its standard error over blocks, for one order.
+def add_blocks(rows, begun, low, high, first, total, square):
+    """Add the histograms of some blocks to the sums over blocks, for some of the values.
 
     Parameters
     ----------
-    rows : (blocks, paths, values) float64
-        Histograms of the blocks.
-    p : int
-        The order.
-    mean, error : (values,) float64
-        Overwritten. The blocks are added in their order, whatever thread made them.
+    rows : (blocks, values) float64
+        Histograms, in the order of their blocks, whatever thread made them.
+    begun : bool
+        Whether blocks came before these; if not, the first of these is kept in `first` and the sums begin.
+    low, high : int
+        The values to add.
+    first, total, square : (values,) float64
+        The first block, and sums of distances from it and of their squares: in a sum of plain squares the variance of
+        small differences would drown.
     """
-    blocks, _, values = rows.shape
-    mean[:] = 0.0
-    error[:] = 0.0
-    for b in range(1, blocks):
-        for k in range(values):
-            # from the first block on: the variance of small differences would drown in a sum of squares
-            away = rows[b, p, k] - rows[0, p, k]
-            mean[k] += away
-            error[k] += away * away
-    for k in range(values):
-        square = max(error[k] - mean[k] * mean[k] / blocks, 0.0)
-        mean[k] = rows[0, p, k] + mean[k] / blocks
-        error[k] = math.sqrt(square / (blocks * (blocks - 1)))
+    # piece by piece, so that the sums are fetched once for all blocks
+    for start in range(low, high, _PIECE):
+        end = min(start + _PIECE, high)
+        if not begun:
+            for k in range(start, end):
+                first[k] = rows[0, k]
+                total[k] = 0.0
+                square[k] = 0.0
+        for b in range(rows.shape[0]):
+            for k in range(start, end):
+                # the first block adds its distance from itself, nothing
+                away = rows[b, k] - first[k]
+                total[k] += away
+                square[k] += away * away
+
+
+@kernel
+def finish_blocks(blocks, first, total, square, per_sr, mean, error):
+    """Mean over blocks and its standard error.
+
+    Parameters
+    ----------
+    blocks : int
+        Number of blocks added.
+    first, total, square : (paths, bins, 2) float64
+        From `add_blocks`.
+    per_sr : (bins,) float64
+        What turns a bin's power into power per steradian.
+    mean, error : (paths, 2, bins) float64
+        Written.
+    """
+    for p in range(first.shape[0]):
+        for k in range(per_sr.size):
+            for q in range(2):
+                away = total[p, k, q]
+                spread = max(square[p, k, q] - away * away / blocks, 0.0)
+                mean[p, q, k] = (first[p, k, q] + away / blocks) * per_sr[k]
+                error[p, q, k] = math.sqrt(spread / (blocks * (blocks - 1))) * per_sr[k]
