@@ -130,6 +130,44 @@ def disc_weights(angle_edges_deg, diameter_deg: float, powers: int, *, threads: 
     return start, weights
 
 
+class DiscFold:
+    """The fold with the sun's limb-darkened disc, made ready for given bins and wavelengths.
+
+    Parameters
+    ----------
+    angle_edges_deg : (bins + 1,) array
+        Edges of equal bins of the scattering angle from 0 to 180 [deg].
+    diameter_deg : float
+        Above 0 [deg].
+    wavelength_nm : (n_wavelength,) array
+        [nm]
+    """
+
+    def __init__(self, angle_edges_deg, diameter_deg: float, wavelength_nm, *, threads: int | None = None):
+        self._profile = limb_darkening(wavelength_nm)
+        self._start, self._basis = disc_weights(angle_edges_deg, diameter_deg, self._profile.shape[1], threads=threads)
+
+    def fold(self, rows, w: int, *, squares: bool = False) -> np.ndarray:
+        """Fold rows of values at wavelength number `w`.
+
+        Parameters
+        ----------
+        rows : (bins, n) array
+        squares : bool
+            The rows are variances, and the weights are squared.
+
+        Returns
+        -------
+        (bins, n) float64
+        """
+        weights = np.tensordot(self._profile[w], self._basis, axes=1)
+        weights /= weights.sum(axis=1, keepdims=True)
+        rows = cast.f64(rows, name="rows", ndim=2)
+        out = np.empty_like(rows)
+        apply_weights(rows, self._start, weights**2 if squares else weights, out)
+        return out
+
+
 def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int | None = None) -> ScatteringTable:
     """Fold a table with the sun's disc; see `ScatteringTable.with_sun_disc`.
 
@@ -146,21 +184,14 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
         return table
     if table.wavelength_nm is None:
         raise ValueError("the sun's limb darkening needs wavelengths; trace with wavelength_nm")
-    profile = limb_darkening(table.wavelength_nm)
-    start, basis = disc_weights(table.angle_edges_deg, diameter_deg, profile.shape[1], threads=threads)
+    disc = DiscFold(table.angle_edges_deg, diameter_deg, table.wavelength_nm, threads=threads)
     phase, error = np.empty_like(table.phase_sr), np.empty_like(table.phase_sr)
 
     def one_wavelength(w):
-        weights = np.tensordot(profile[w], basis, axes=1)
-        weights /= weights.sum(axis=1, keepdims=True)
-        for values, factors, out in (
-            (table.phase_sr[:, :, w], weights, phase),
-            (table.standard_error_sr[:, :, w] ** 2, weights**2, error),
-        ):
-            rows = np.ascontiguousarray(values.reshape(-1, values.shape[-1]).T)
-            folded = np.empty_like(rows)
-            apply_weights(rows, start, factors, folded)
-            out[:, :, w] = folded.T.reshape(values.shape)
+        for values, out, squares in ((table.phase_sr, phase, False), (table.standard_error_sr, error, True)):
+            rows = values[:, :, w].reshape(-1, values.shape[-1]).T
+            folded = disc.fold(rows**2 if squares else rows, w, squares=squares)
+            out[:, :, w] = folded.T.reshape(values[:, :, w].shape)
 
     run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
     np.sqrt(error, out=error)

@@ -88,11 +88,8 @@ def trace_sphere(
     within = 1 if n.size >= cores else cores
 
     def one_wavelength(w):
-        absorption = 4.0 * k[w] * np.pi * diameter_mm * 1e6 / wavelength_nm[w] if k[w] > 0 else 0.0
-        blocks = [
-            SphereBlock(float(n[w]), float(absorption), per_block, int(paths), int(bins), stream_state(seed, b, w))
-            for b in range(BLOCKS)
-        ]
+        exponent = absorption_exponent(1j * k[w], wavelength_nm[w], diameter_mm) if k[w] > 0 else 0.0
+        blocks = _blocks(n[w], exponent, per_block, paths, bins, seed, w)
         # a single wavelength is written where it belongs; of several each is a slice with gaps
         out = [
             values.reshape(paths, 2, bins) if n.size == 1 else np.empty((paths, 2, bins)) for values in (phase, error)
@@ -121,6 +118,50 @@ def trace_sphere(
         rays=per_block * BLOCKS,
         seed=int(seed),
     )
+
+
+def trace_sphere_blocks(
+    index: complex, *, paths: int, rays: int, bins: int, seed: int = 0, dimension: int = 0, exponent: float = 0.0
+) -> tuple[np.ndarray, np.ndarray]:
+    """Trace one wavelength on this thread and keep the blocks apart, for figures that need their scatter.
+
+    Parameters
+    ----------
+    index : complex
+        Refractive index relative to air.
+    paths, rays, bins, seed : int
+        As for `trace_sphere`.
+    dimension : int
+        Number of the wavelength, which picks the random stream.
+    exponent : float
+        4 k pi D / wavelength: absorption along a diameter would be 1 - exp(-exponent).
+
+    Returns
+    -------
+    phase_sr : (BLOCKS, paths, 2, bins) float64
+        [sr⁻¹]
+    left_over : (BLOCKS,) float64
+        Share left over after the last order.
+    """
+    per_block = -(-rays // BLOCKS)
+    per_sr = 0.5 / (per_block * ring_solid_angle_sr(np.linspace(0.0, 180.0, bins + 1)))
+    rows, balance = np.empty((BLOCKS, paths, bins, 2)), np.empty((BLOCKS, 2, 2))
+    blocks = _blocks(index.real, exponent, per_block, paths, bins, seed, dimension)
+    run_all(trace_sphere_block, list(zip(blocks, rows, balance, strict=True)), threads=1)
+    phase = np.moveaxis(rows, 3, 2) * per_sr
+    return np.ascontiguousarray(phase), balance[:, 0].sum(axis=1) / (2.0 * per_block)
+
+
+def _blocks(n, exponent, per_block, paths, bins, seed, dimension):
+    return [
+        SphereBlock(float(n), float(exponent), per_block, int(paths), int(bins), stream_state(seed, b, dimension))
+        for b in range(BLOCKS)
+    ]
+
+
+def absorption_exponent(index, wavelength_nm: float, diameter_mm: float) -> float:
+    """4 k pi D / wavelength: the exponent of absorption along a diameter of the drop."""
+    return float(4.0 * np.imag(index) * np.pi * diameter_mm * 1e6 / wavelength_nm)
 
 
 def _trace_blocks(blocks, per_sr, mean, error, threads, stop):
