@@ -1,8 +1,10 @@
 """Monte Carlo ray tracing of rainbows: a scene file becomes a calibrated picture of the sky."""
 
-__all__ = ["InputError", "__version__", "load_scene", "optics", "render", "scattering_table"]
+__all__ = ["Drop", "InputError", "__version__", "compare", "load_scene", "optics", "render", "scattering_table"]
 
 _WHERE = {
+    "Drop": "raytrace.comparison.drop",
+    "compare": "raytrace.comparison.run",
     "InputError": "raytrace.errors",
     "load_scene": "raytrace.scene.load",
     "render": "raytrace.frame",

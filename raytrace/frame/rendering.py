@@ -73,7 +73,7 @@ def render(
         phases.append(_mean_phase(table, light))
         tables.append(order_xyz(table, light.direct_normal, scene.sun.disc_diameter_deg, threads=threads))
     lens = make_lens(scene.camera, antisolar(light.sun)[0])
-    plate = _plate(scene, lens) if scene.sky.model == "plate" else None
+    plate = read_plate(scene, lens) if scene.sky.model == "plate" else None
     plate_mean = None if plate is None else plate.mean(axis=(0, 1), dtype=np.float64)
     view = prepare_view(
         scene, light, tables, phases, lens.pixel_rad, plate_mean, span=azimuth_span(lens), threads=threads
@@ -159,7 +159,7 @@ def _develop(xyz, matrix, seed, threads):
     return rgb, counts.sum(axis=0)
 
 
-def _plate(scene, lens) -> np.ndarray:
+def read_plate(scene, lens) -> np.ndarray:
     """(height, width, 3) float32 XYZ of the background picture at the frame's size [cd/m2]."""
     from PIL import Image, ImageOps
 

@@ -89,20 +89,36 @@ def illumination(scene: Scene, wavelength_nm: np.ndarray) -> Illumination:
         )
     wavelength = np.atleast_1d(np.array(wavelength_nm, dtype=np.float64))
     luminous = xyz_weights(wavelength)[:, 1]
-    extraterrestrial = _extraterrestrial(tuple(wavelength)) / sun.distance_au**2
+    above_air = extraterrestrial(wavelength) / sun.distance_au**2
     direct, diffuse, airmass = _transmittances(scene.air, sun.elevation_deg)
-    direct_normal = extraterrestrial * direct(wavelength)
-    diffuse_horizontal = extraterrestrial * diffuse(wavelength)
+    direct_normal = above_air * direct(wavelength)
+    diffuse_horizontal = above_air * diffuse(wavelength)
     return Illumination(
         wavelength_nm=wavelength,
         direct_normal=direct_normal,
         diffuse_horizontal=diffuse_horizontal,
         direct_normal_lx=float(luminous @ direct_normal),
         diffuse_horizontal_lx=float(luminous @ diffuse_horizontal),
-        extraterrestrial=extraterrestrial,
+        extraterrestrial=above_air,
         sun=sun,
         airmass=airmass,
     )
+
+
+def extraterrestrial(wavelength_nm: np.ndarray) -> np.ndarray:
+    """Irradiance by the sun above the air at 1 au, ASTM G173-03, mean of each wavelength's bin.
+
+    Parameters
+    ----------
+    wavelength_nm : array_like, shape (n,)
+        Wavelengths, strictly increasing, their bins within 280 to 4000 [nm].
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        [W m-2 nm-1]
+    """
+    return _extraterrestrial(tuple(np.atleast_1d(wavelength_nm).tolist()))
 
 
 @lru_cache(maxsize=8)

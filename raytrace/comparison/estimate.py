@@ -1,0 +1,168 @@
+"""Monte Carlo estimates of what leaves a drop, with rays added until the figures are known well enough.
+
+The blocks of the tracer are kept apart all the way: each figure is worked out anew without one of them, and the scatter
+of these values is its standard error (the jackknife, Quenouille 1956 and Tukey 1958), ratios and peaks included.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from raytrace.colour import xyz_weights
+from raytrace.cores import core_count
+from raytrace.jit import run_all
+from raytrace.optics.fold import DiscFold
+from raytrace.optics.sphere import BLOCKS, absorption_exponent, trace_sphere_blocks
+from raytrace.optics.table import ring_solid_angle_sr
+from raytrace.random_stream import stream_state
+
+BINS = 4_500
+MONO_NM = 550.0
+# Rays of the first round, and at most, at 550 nm and at each wavelength of the spectrum
+FIRST_RAYS = (200_000, 24_000)
+MOST_RAYS = (200_000_000, 6_000_000)
+_PIECES = 4
+# stream of the rounds, apart from those of the wavelengths
+_ROUND_DIMENSION = 2_000_003
+
+
+class Estimate:
+    """Light that leaves one drop, by block, order and angle, after the sun's disc; rays can be added.
+
+    Parameters
+    ----------
+    index : (n_wavelength,) complex array
+        Relative to air.
+    wavelength_nm : (n_wavelength,) array
+        [nm]
+    mono_index : complex
+        Index at 550 nm.
+    diameter_mm, disc_diameter_deg : float
+        Of the drop and of the sun's disc [mm, deg].
+    paths : int
+        Debye orders, p = 0 to paths - 1.
+    seed : int
+    threads : int, optional
+
+    Attributes
+    ----------
+    mono : (BLOCKS, paths, 2, BINS) float64
+        Phase function at 550 nm [sr⁻¹].
+    share : (BLOCKS, paths) float64
+        Shares of the intercepted light at 550 nm.
+    left_over : (BLOCKS,) float64
+        Share left over after the last order.
+    colour : (3, BLOCKS, paths, 2, BINS) float64
+        Radiance per unit of sunlit rain as XYZ [cd/m2].
+    """
+
+    def __init__(
+        self, index, wavelength_nm, mono_index, diameter_mm, disc_diameter_deg, paths, *, seed=0, threads=None
+    ):
+        self.index, self.wavelength_nm, self.mono_index = np.asarray(index), np.asarray(wavelength_nm), mono_index
+        self.diameter_mm, self.paths, self.seed = diameter_mm, paths, seed
+        self.edges_deg = np.linspace(0.0, 180.0, BINS + 1)
+        self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
+        self._threads = core_count() if threads is None else threads
+        self._weights = None
+        self._folds = None
+        if disc_diameter_deg > 0:
+            every = np.append(self.wavelength_nm, MONO_NM)
+            self._folds = DiscFold(self.edges_deg, disc_diameter_deg, every, threads=threads)
+        self.rays = [0, 0]
+        self._rounds = [0, 0]
+        self.mono = np.zeros((BLOCKS, paths, 2, BINS))
+        self.share = np.zeros((BLOCKS, paths))
+        self.left_over = np.zeros(BLOCKS)
+        self.colour = np.zeros((3, BLOCKS, paths, 2, BINS))
+
+    def set_spectrum(self, irradiance) -> None:
+        """Say what sunlight falls on the drop, before rays are added in colour: (n_wavelength,) [W m-2 nm-1]."""
+        self._weights = np.asarray(irradiance)[:, None] * xyz_weights(self.wavelength_nm)
+
+    def add_mono(self, rays: int) -> None:
+        """Add rays at 550 nm, in pieces that run side by side; their number must not follow the threads."""
+        pieces = _PIECES
+        found = [None] * pieces
+
+        def one(piece):
+            exponent = absorption_exponent(self.mono_index, MONO_NM, self.diameter_mm)
+            seed = self._round_seed(0, piece)
+            phase, left = trace_sphere_blocks(
+                self.mono_index, paths=self.paths, rays=rays // pieces, bins=BINS, seed=seed, exponent=exponent
+            )
+            share = phase.sum(axis=2) @ ring_solid_angle_sr(self.edges_deg)
+            found[piece] = self._fold(phase, self.wavelength_nm.size), share, left
+
+        run_all(one, [(k,) for k in range(pieces)], threads=self._threads)
+        new = [np.mean(parts, axis=0) for parts in zip(*found, strict=True)]
+        self.mono, self.share, self.left_over = (
+            self._merged(0, old, fresh, rays)
+            for old, fresh in zip((self.mono, self.share, self.left_over), new, strict=True)
+        )
+        self._count(0, rays)
+
+    def add_colour(self, rays: int) -> None:
+        """Add rays at every wavelength of the spectrum."""
+        count = self.wavelength_nm.size
+        total, part = np.zeros_like(self.colour), np.empty(self.colour.shape[1:])
+        seed = self._round_seed(1, 0)
+        step = max(self._threads, 1)
+        for start in range(0, count, step):
+            some = range(start, min(start + step, count))
+            found = [None] * len(some)
+
+            def one(k, some=some, found=found):
+                w = some[k]
+                exponent = absorption_exponent(self.index[w], self.wavelength_nm[w], self.diameter_mm)
+                phase, _ = trace_sphere_blocks(
+                    self.index[w], paths=self.paths, rays=rays, bins=BINS, seed=seed, dimension=w, exponent=exponent
+                )
+                found[k] = self._fold(phase, w)
+
+            run_all(one, [(k,) for k in range(len(some))], threads=self._threads)
+            for w, phase in zip(some, found, strict=True):
+                for c in range(3):
+                    np.multiply(phase, self._weights[w, c], out=part)
+                    total[c] += part
+        self.colour = self._merged(1, self.colour, total, rays)
+        self._count(1, rays)
+
+    def _fold(self, phase, w):
+        if self._folds is None:
+            return phase
+        folded = self._folds.fold(phase.reshape(-1, BINS).T, w)
+        return np.ascontiguousarray(folded.T).reshape(phase.shape)
+
+    def _round_seed(self, kind, piece):
+        return int(stream_state(self.seed, 4096 * self._rounds[kind] + piece, _ROUND_DIMENSION + kind))
+
+    def _merged(self, kind, old, new, rays):
+        return old + (new - old) * (rays / (self.rays[kind] + rays))
+
+    def _count(self, kind, rays):
+        self.rays[kind] += rays
+        self._rounds[kind] += 1
+
+
+def jackknife(figure, *blocks):
+    """A figure and its standard error from independent blocks.
+
+    Parameters
+    ----------
+    figure : callable
+        Of the means over blocks of each of `blocks`; gives an array of any shape.
+    blocks : arrays of shape (BLOCKS, …)
+
+    Returns
+    -------
+    value, standard_error : arrays of the figure's shape
+    """
+    totals = [b.sum(axis=0) for b in blocks]
+    count = len(blocks[0])
+    value = np.asarray(figure(*(t / count for t in totals)))
+    without = np.array(
+        [figure(*((t - b[i]) / (count - 1) for t, b in zip(totals, blocks, strict=True))) for i in range(count)]
+    )
+    spread = ((without - without.mean(axis=0)) ** 2).sum(axis=0)
+    return value, np.sqrt(spread * (count - 1) / count)

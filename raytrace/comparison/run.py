@@ -1,0 +1,239 @@
+"""Compare bows: trace until the figures are known, then look at the scene."""
+
+from __future__ import annotations
+
+import sys
+from concurrent.futures import ThreadPoolExecutor
+
+import numpy as np
+
+from raytrace.comparison.drop import Drop
+from raytrace.comparison.estimate import FIRST_RAYS, MONO_NM, MOST_RAYS, Estimate
+from raytrace.comparison.figures import (
+    COLOUR_FIGURES,
+    MONO_FIGURES,
+    RED_NM,
+    VIOLET_NM,
+    bow_figures,
+    edges,
+    order_name,
+    ray_weight,
+)
+from raytrace.comparison.report import Report, Row
+from raytrace.drops.sizes import drop_sizes
+from raytrace.drops.water import refractive_index
+from raytrace.errors import InputError
+from raytrace.optics.scattering import wavelengths_nm
+
+MOST_ORDERS = 12
+# Orders traced at least, so that the glow of a few bows' drops is whole
+_FEWEST_PATHS = 9
+# Bows of neighbouring wavelengths stand a tenth of the sun's disc apart
+_STEP_NM = 10.0
+
+
+def compare(
+    scene_or_drop=None,
+    *,
+    orders: int = 7,
+    tolerance: float = 0.01,
+    seed: int | None = None,
+    threads: int | None = None,
+    progress: bool = False,
+    most_rays: tuple[int, int] = MOST_RAYS,
+    name: str = "scene",
+) -> Report:
+    """How bright each bow is against the others, against the glow of the same drops, and against a scene's sky.
+
+    Parameters
+    ----------
+    scene_or_drop : Scene or Drop, optional
+        A scene: its sun, air, rain, sky and camera. A drop: black sky. A drop of 1 mm and 20 degC unless given.
+    orders : int
+        Bows 1 to this order, 1 to 12.
+    tolerance : float
+        Relative standard error that rays are added for, above 0 to 0.5.
+    seed : int, optional
+        The scene's own, or 0, unless given.
+    threads : int, optional
+        All cores unless given; the figures do not depend on it.
+    progress : bool
+        Show a bar on standard error.
+    most_rays : (int, int)
+        Rays at 550 nm, and at each wavelength of the spectrum, at which adding ends.
+    name : str
+        What problems call the scene.
+
+    Returns
+    -------
+    Report
+
+    Raises
+    ------
+    InputError
+        If an argument is out of range, or the scene cannot be used.
+    """
+    subject = Drop() if scene_or_drop is None else scene_or_drop
+    _check(orders, tolerance, seed)
+    is_drop = isinstance(subject, Drop)
+    scene = subject.scene() if is_drop else subject
+    if not is_drop:
+        from raytrace.preflight import preflight
+
+        preflight(scene, name=name)
+    seed = scene.optics.seed if seed is None else int(seed)
+    wavelength = wavelengths_nm(scene.optics.model_copy(update={"wavelength_step_nm": _STEP_NM}))
+    paths = max(orders + 2, _FEWEST_PATHS, 0 if is_drop else scene.optics.paths)
+    with ThreadPoolExecutor(1) as pool:
+        # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
+        spectrum = pool.submit(_light, scene, wavelength, is_drop and subject.sun_elevation_deg is None)
+        estimates = [
+            _estimate(scene, c, wavelength, paths, seed, threads) for c in range(1 if is_drop else len(scene.rain))
+        ]
+        estimates[0].add_mono(FIRST_RAYS[0])
+        light = spectrum.result()
+    for estimate in estimates:
+        estimate.set_spectrum(light if isinstance(light, np.ndarray) else light.direct_normal)
+        estimate.add_colour(FIRST_RAYS[1])
+    index = refractive_index(scene.rain[0], scene.air, [VIOLET_NM, MONO_NM, RED_NM]).real
+    places = {k: edges(float(index[2]), float(index[0]), float(index[1]), k) for k in range(1, orders + 1)}
+    found = _refine(estimates[0], places, tolerance, most_rays, progress)
+    rows = [_row(k, places[k], found.get(k), float(index[1]), tolerance) for k in places]
+    report = Report(
+        rows=rows,
+        input=_input(subject, scene, name, orders, tolerance, seed, light),
+        rays=tuple(estimates[0].rays),
+        left_over=float(estimates[0].left_over.mean()),
+        tolerance=tolerance,
+        most_rays=tuple(most_rays),
+        curves=_curves(estimates[0]),
+    )
+    if is_drop:
+        if subject.sun_elevation_deg is not None:
+            for row in rows:
+                row.place_above_horizon(float(subject.sun_elevation_deg))
+    else:
+        from raytrace.comparison.in_scene import look
+
+        look(scene, light, estimates, rows, found, threads=threads)
+    return report
+
+
+def _check(orders, tolerance, seed):
+    problems = []
+    if not (isinstance(orders, (int, np.integer)) and 1 <= orders <= MOST_ORDERS):
+        problems.append(
+            f"orders: {orders!r} given, which is out of range; what works: a whole number from 1 to {MOST_ORDERS}"
+        )
+    if not (isinstance(tolerance, (int, float)) and 0 < tolerance <= 0.5):
+        problems.append(f"tolerance: {tolerance!r} given, which is out of range; what works: above 0 to 0.5")
+    if seed is not None and not (isinstance(seed, (int, np.integer)) and 0 <= seed < 2**63):
+        problems.append(f"seed: {seed!r} given, which is out of range; what works: a whole number from 0")
+    if problems:
+        raise InputError(*problems)
+
+
+def _light(scene, wavelength, above_the_air):
+    """The scene's illumination, or just the spectrum of the unattenuated sun."""
+    from raytrace.light.spectrum import extraterrestrial, illumination
+
+    if above_the_air:
+        return extraterrestrial(wavelength)
+    from raytrace.sky.radiance import with_sky_illuminance
+
+    return with_sky_illuminance(scene, illumination(scene, wavelength))
+
+
+def _estimate(scene, curtain, wavelength, paths, seed, threads):
+    rain = scene.rain[curtain]
+    return Estimate(
+        refractive_index(rain, scene.air, wavelength),
+        wavelength,
+        complex(refractive_index(rain, scene.air, [MONO_NM])[0]),
+        # of one size there is nothing to average, and the laws' libraries need not load
+        rain.diameter_mm if rain.size_law == "single" else float(drop_sizes(rain).effective_diameter_mm),
+        scene.sun.disc_diameter_deg,
+        paths,
+        seed=seed,
+        threads=threads,
+    )
+
+
+def _refine(estimate, places, tolerance, most_rays, progress) -> dict:
+    """Add rays, twice as many each time, until every figure is known or the limit is reached."""
+    from tqdm import tqdm
+
+    with tqdm(
+        desc="tracing drops", unit=" M rays", disable=not progress, file=sys.stderr, bar_format="{desc}: {postfix}"
+    ) as bar:
+        while True:
+            found, primary = {}, None
+            for order, place in places.items():
+                if place is None:
+                    continue
+                found[order] = bow_figures(estimate, order, place, primary)
+                if order == 1:
+                    primary = found[order]
+            worst = [_worst(found, names) for names in (MONO_FIGURES, COLOUR_FIGURES)]
+            million = (estimate.rays[0] + estimate.rays[1] * estimate.wavelength_nm.size) / 1e6
+            bar.set_postfix_str(f"{million:.1f} M rays, largest error {max(worst):.2%} of {tolerance:.2%}")
+            more = [
+                min(estimate.rays[k], most_rays[k] - estimate.rays[k]) if worst[k] > tolerance else 0 for k in range(2)
+            ]
+            if max(more) < 1000:
+                return found
+            if more[0] >= 1000:
+                estimate.add_mono(more[0])
+            if more[1] >= 1000:
+                estimate.add_colour(more[1])
+
+
+def _worst(found, names) -> float:
+    return max((relative_error(f["value"][n], f["error"][n]) for f in found.values() for n in names), default=0.0)
+
+
+def relative_error(value: float, error: float) -> float:
+    """Standard error over the figure; infinite where the figure is zero and its error is not."""
+    return error / abs(value) if value else (np.inf if error else 0.0)
+
+
+def _row(order, place, found, index, tolerance) -> Row:
+    if place is None:
+        return Row(order=order, name=order_name(order), centre=None)
+    weight = ray_weight(index, order)
+    ratio = weight / ray_weight(index, 1) if index < 2 else float("nan")
+    names = MONO_FIGURES + COLOUR_FIGURES
+    return Row(
+        order=order,
+        name=order_name(order),
+        centre=place["centre"],
+        red_edge_deg=place["red_edge_deg"],
+        violet_edge_deg=place["violet_edge_deg"],
+        colour_width_deg=place["colour_width_deg"],
+        bow_ray_weight=weight,
+        bow_ray_ratio=ratio,
+        filter=found["filter"],
+        standard_error=found["error"],
+        missed=[n for n in names if relative_error(found["value"][n], found["error"][n]) > tolerance],
+        **found["value"],
+    )
+
+
+def _curves(estimate) -> dict:
+    return {
+        "angle_deg": estimate.angle_deg,
+        "mono_sr": estimate.mono.mean(axis=0),
+        "xyz": np.moveaxis(estimate.colour.mean(axis=1), 0, -1),
+    }
+
+
+def _input(subject, scene, name, orders, tolerance, seed, light) -> dict:
+    common = {"orders": int(orders), "tolerance": float(tolerance), "seed": int(seed)}
+    if isinstance(subject, Drop):
+        import dataclasses
+
+        return {"drop": dataclasses.asdict(subject), **common}
+    from raytrace.scene.load import scene_hash
+
+    sun = {"elevation_deg": light.sun.elevation_deg, "azimuth_deg": light.sun.azimuth_deg}
+    return {"scene": {"name": name, "sha256": scene_hash(scene), "sun": sun}, **common}
