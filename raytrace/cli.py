@@ -125,6 +125,28 @@ def _parse(arguments: list[str]):
     render.add_argument("--no-cache", action="store_true", help="neither read nor keep traced tables")
     render.set_defaults(command=_render)
 
+    compare = commands.add_parser(
+        "compare",
+        help="how bright each bow is",
+        description="Says how bright each bow is: against the others, against the glow of the same drops, and, with a "
+        "scene, against its sky. Without a scene: one drop before a black sky.",
+    )
+    compare.add_argument("scene", metavar="SCENE", nargs="?", help="scene file (TOML); a drop unless given")
+    compare.add_argument("--diameter-mm", metavar="D", help="diameter of the drop; 1 unless given")
+    compare.add_argument("--temperature-c", metavar="T", help="temperature of the drop; 20 unless given")
+    compare.add_argument("--refractive-index", metavar="N", help="a fixed index in place of water's")
+    compare.add_argument(
+        "--sun-elevation-deg", metavar="E", help="let the default air dim the sunlight, place the bows"
+    )
+    compare.add_argument("--orders", metavar="K", help="bows 1 to K, up to 12; 7 unless given")
+    compare.add_argument("--tolerance", metavar="R", help="relative standard error to reach; 0.01 unless given")
+    compare.add_argument("--json", metavar="FILE", help="write the figures as JSON")
+    compare.add_argument("--csv", metavar="FILE", help="write the figures as CSV")
+    compare.add_argument("--plot", metavar="PNG", help="draw the figures")
+    compare.add_argument("--seed", metavar="N", help="seed of the rays, in place of the scene's")
+    compare.add_argument("--threads", metavar="N", help="threads to use; all cores unless given")
+    compare.set_defaults(command=_compare)
+
     check = commands.add_parser("check", help="validate scene files", description="Says what render would use.")
     check.add_argument("scenes", metavar="SCENE", nargs="+", help="scene file (TOML)")
     check.set_defaults(command=_check)
@@ -169,6 +191,68 @@ def _render(options) -> int:
     return DONE
 
 
+def _compare(options) -> int:
+    from raytrace.comparison.drop import Drop
+
+    threads = None if options.threads is None else _threads(options.threads)
+    asked = {
+        "orders": _number("--orders", options.orders, whole=True),
+        "tolerance": _number("--tolerance", options.tolerance),
+        "seed": _number("--seed", options.seed, whole=True),
+    }
+    names = ("diameter_mm", "temperature_c", "refractive_index", "sun_elevation_deg")
+    drop = {name: _number(f"--{name.replace('_', '-')}", getattr(options, name)) for name in names}
+    drop = {name: value for name, value in drop.items() if value is not None}
+    outputs = {kind: getattr(options, kind) for kind in ("json", "csv", "plot") if getattr(options, kind) is not None}
+    paths = {kind: _output(given, options.scene, ".png" if kind == "plot" else None) for kind, given in outputs.items()}
+    if len({str(path.absolute()) for path in paths.values()}) < len(paths):
+        raise InputError("--json, --csv and --plot: two of them name one file; what works: a name for each")
+    if options.scene is not None and drop:
+        given = " and ".join(f"--{name.replace('_', '-')}" for name in drop)
+        raise InputError(f"{given}: given beside a scene, which has its own; what works: one of the two")
+    if options.scene is None:
+        subject = Drop(**drop)
+    else:
+        from raytrace.scene.load import load_scene
+
+        subject = load_scene(options.scene)
+    from raytrace.comparison.run import compare
+
+    asked = {name: value for name, value in asked.items() if value is not None}
+    report = compare(subject, **asked, threads=threads, progress=sys.stderr.isatty(), name=options.scene or "drop")
+    for kind, path in paths.items():
+        _write(report, kind, path)
+    print(report.to_text())
+    return DONE
+
+
+def _write(report, kind, path) -> None:
+    from raytrace.files import write_atomic
+
+    try:
+        if kind == "plot":
+            report.plot(path)
+        else:
+            write_atomic(path, (report.to_json() if kind == "json" else report.to_csv()).encode())
+    except OSError as problem:
+        raise InputError(
+            f"{quoted(str(path), 200)}: cannot be written ({problem.strerror or problem}); what works: another folder"
+        ) from None
+
+
+def _number(option: str, text: str | None, *, whole: bool = False):
+    """An option's number; the range is judged where it is used."""
+    if text is None:
+        return None
+    try:
+        if len(text) > 40:
+            raise ValueError
+        return int(text) if whole else float(text)
+    except ValueError:
+        works = "a whole number" if whole else "a number"
+        raise InputError(f"{option}: {_one_line(text)!r} is no number; what works: {works}") from None
+
+
 def _check(options) -> int:
     from raytrace.report import scene_report
     from raytrace.scene.load import load_scene
@@ -195,11 +279,11 @@ def _info(options) -> int:
     return DONE
 
 
-def _output(given: str | None, scene: str) -> Path:
-    """Where the picture goes, checked before any work is done."""
+def _output(given: str | None, scene: str | None, ending: str | None = ".png") -> Path:
+    """Where a result goes, checked before any work is done."""
     path = Path(given) if given is not None else Path(Path(scene).stem + ".png")
     name, folder = quoted(str(path), 200), quoted(str(path.parent), 200)
-    if path.suffix.lower() != ".png":
+    if ending is not None and path.suffix.lower() != ending:
         raise InputError(f"{name}: is no name of a PNG file; what works: a name that ends in .png")
     try:
         if path.is_dir():
@@ -208,7 +292,7 @@ def _output(given: str | None, scene: str) -> Path:
             raise InputError(f"{name}: there is no folder {folder}; what works: a folder that exists")
         if not os.access(path.parent, os.W_OK):
             raise InputError(f"{name}: the folder {folder} may not be written; what works: -o in another folder")
-        if path.exists() and Path(scene).exists() and path.samefile(scene):
+        if scene is not None and path.exists() and Path(scene).exists() and path.samefile(scene):
             raise InputError(f"{name}: is the scene file itself; what works: another name")
     except OSError as problem:
         raise InputError(

@@ -258,7 +258,7 @@ def scene_lines(rows) -> list[str]:
         out.append(" ".join(parts).rstrip())
     text = (
         "Position angles count from the arc's top. Thresholds of contrast: 0.02 usual for the eye in the laboratory, "
-        "0.05 for visibility ranges; colour, cloud texture and practice shift both. Filters: ideal, turned along the arc at "
-        "its top or at its lowest seen part; the sky is taken as unpolarised."
+        "0.05 for visibility ranges; colour, cloud texture and practice shift both. Filters: ideal, turned along the "
+        "arc at its top or at its lowest seen part; the sky is taken as unpolarised."
     )
     return [*out, *notes, *textwrap.wrap(text, 118)]
