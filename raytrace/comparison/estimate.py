@@ -6,12 +6,14 @@ of these values is its standard error (the jackknife, Quenouille 1956 and Tukey 
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 
 from raytrace.colour import xyz_weights
 from raytrace.cores import core_count
 from raytrace.jit import run_all
-from raytrace.optics.fold import DiscFold
+from raytrace.optics.fold import DiscFold, add_channels
 from raytrace.optics.sphere import BLOCKS, absorption_exponent, trace_sphere_blocks
 from raytrace.optics.table import ring_solid_angle_sr
 from raytrace.random_stream import stream_state
@@ -82,57 +84,54 @@ class Estimate:
 
     def add_mono(self, rays: int) -> None:
         """Add rays at 550 nm, in pieces that run side by side; their number must not follow the threads."""
-        pieces = _PIECES
-        found = [None] * pieces
+        found = [None] * _PIECES
 
         def one(piece):
             exponent = absorption_exponent(self.mono_index, MONO_NM, self.diameter_mm)
             seed = self._round_seed(0, piece)
             phase, left = trace_sphere_blocks(
-                self.mono_index, paths=self.paths, rays=rays // pieces, bins=BINS, seed=seed, exponent=exponent
+                self.mono_index, paths=self.paths, rays=rays // _PIECES, bins=BINS, seed=seed, exponent=exponent
             )
-            share = phase.sum(axis=2) @ ring_solid_angle_sr(self.edges_deg)
+            share = np.tensordot(ring_solid_angle_sr(self.edges_deg), phase.sum(axis=3), axes=1)
             found[piece] = self._fold(phase, self.wavelength_nm.size), share, left
 
-        run_all(one, [(k,) for k in range(pieces)], threads=self._threads)
-        new = [np.mean(parts, axis=0) for parts in zip(*found, strict=True)]
-        self.mono, self.share, self.left_over = (
-            self._merged(0, old, fresh, rays)
-            for old, fresh in zip((self.mono, self.share, self.left_over), new, strict=True)
-        )
+        run_all(one, [(k,) for k in range(_PIECES)], threads=self._threads)
+        mono, share, left = (np.mean(parts, axis=0) for parts in zip(*found, strict=True))
+        mono = np.moveaxis(mono.reshape(BINS, BLOCKS, self.paths, 2), 0, -1)
+        self.mono = self._merged(0, self.mono, mono, rays)
+        self.share = self._merged(0, self.share, share, rays)
+        self.left_over = self._merged(0, self.left_over, left, rays)
         self._count(0, rays)
 
     def add_colour(self, rays: int) -> None:
         """Add rays at every wavelength of the spectrum."""
         count = self.wavelength_nm.size
-        total, part = np.zeros_like(self.colour), np.empty(self.colour.shape[1:])
+        total = np.zeros((3, BINS, BLOCKS * self.paths * 2))
         seed = self._round_seed(1, 0)
-        step = max(self._threads, 1)
-        for start in range(0, count, step):
-            some = range(start, min(start + step, count))
-            found = [None] * len(some)
+        shares = list(itertools.pairwise(int(v) for v in np.linspace(0, BINS, self._threads + 1)))
+        for start in range(0, count, self._threads):
+            some = range(start, min(start + self._threads, count))
+            found = {}
 
-            def one(k, some=some, found=found):
-                w = some[k]
+            def one(w, found=found):
                 exponent = absorption_exponent(self.index[w], self.wavelength_nm[w], self.diameter_mm)
                 phase, _ = trace_sphere_blocks(
                     self.index[w], paths=self.paths, rays=rays, bins=BINS, seed=seed, dimension=w, exponent=exponent
                 )
-                found[k] = self._fold(phase, w)
+                found[w] = self._fold(phase, w)
 
-            run_all(one, [(k,) for k in range(len(some))], threads=self._threads)
-            for w, phase in zip(some, found, strict=True):
-                for c in range(3):
-                    np.multiply(phase, self._weights[w, c], out=part)
-                    total[c] += part
+            run_all(one, [(w,) for w in some], threads=self._threads)
+            for w in some:
+                adds = [(found[w], self._weights[w], low, high, total) for low, high in shares]
+                run_all(add_channels, adds, threads=self._threads)
+        total = np.moveaxis(total.reshape(3, BINS, BLOCKS, self.paths, 2), 1, -1)
         self.colour = self._merged(1, self.colour, total, rays)
         self._count(1, rays)
 
-    def _fold(self, phase, w):
-        if self._folds is None:
-            return phase
-        folded = self._folds.fold(phase.reshape(-1, BINS).T, w)
-        return np.ascontiguousarray(folded.T).reshape(phase.shape)
+    def _fold(self, phase, w) -> np.ndarray:
+        """(BINS, rows) of a traced (BINS, …), with the sun's disc."""
+        rows = phase.reshape(BINS, -1)
+        return rows if self._folds is None else self._folds.fold(rows, w)
 
     def _round_seed(self, kind, piece):
         return int(stream_state(self.seed, 4096 * self._rounds[kind] + piece, _ROUND_DIMENSION + kind))

@@ -78,6 +78,24 @@ def ring_weights(first, last, edges, rho, basis, theta_nodes, theta_weights, sta
 
 
 @kernel
+def add_channels(values, weights, low, high, total):
+    """total[c, i] += weights[c] values[i] for rows i from low to high; one pass over the values for all channels.
+
+    Parameters
+    ----------
+    values : (rows, n) float64
+    weights : (channels,) float64
+    low, high : int
+    total : (channels, rows, n) float64
+    """
+    for i in range(low, high):
+        for c in range(weights.size):
+            w = weights[c]
+            for k in range(values.shape[1]):
+                total[c, i, k] += w * values[i, k]
+
+
+@kernel
 def apply_weights(values, start, weights, out):
     """out[i, row] = sum over j of weights[i, j] values[start[i] + j, row].
 

@@ -138,8 +138,8 @@ def trace_sphere_blocks(
 
     Returns
     -------
-    phase_sr : (BLOCKS, paths, 2, bins) float64
-        [sr⁻¹]
+    phase_sr : (bins, BLOCKS, paths, 2) float64
+        Angles outermost, as the fold with the sun's disc takes them [sr⁻¹].
     left_over : (BLOCKS,) float64
         Share left over after the last order.
     """
@@ -148,8 +148,9 @@ def trace_sphere_blocks(
     rows, balance = np.empty((BLOCKS, paths, bins, 2)), np.empty((BLOCKS, 2, 2))
     blocks = _blocks(index.real, exponent, per_block, paths, bins, seed, dimension)
     run_all(trace_sphere_block, list(zip(blocks, rows, balance, strict=True)), threads=1)
-    phase = np.moveaxis(rows, 3, 2) * per_sr
-    return np.ascontiguousarray(phase), balance[:, 0].sum(axis=1) / (2.0 * per_block)
+    phase = np.empty((bins, BLOCKS, paths, 2))
+    np.multiply(np.moveaxis(rows, 2, 0), per_sr[:, None, None, None], out=phase)
+    return phase, balance[:, 0].sum(axis=1) / (2.0 * per_block)
 
 
 def _blocks(n, exponent, per_block, paths, bins, seed, dimension):
