@@ -80,7 +80,8 @@ def bow_figures(estimate: Estimate, order: int, place: dict, primary: dict | Non
     Returns
     -------
     dict
-        `value` and `error`: figure by name; `mono_bin`, `luminance_bin`: bins of the peaks.
+        `value` and `error`: figure by name; `mono_bin`, `luminance_bin`: bins of the peaks;
+        `luminance_relative_error` of the luminance peak; `filter`: how the best filter stands.
     """
     p, angle = order + 1, estimate.angle_deg
     mono_mean, colour_mean = estimate.mono.mean(axis=0), estimate.colour[1].mean(axis=0)
@@ -104,6 +105,7 @@ def bow_figures(estimate: Estimate, order: int, place: dict, primary: dict | Non
     luminance = estimate.colour[1].sum(axis=2)
     columns = luminance[:, p, there], luminance[:, reference, first["luminance_bin"]]
     ratio, ratio_error = jackknife(lambda a, b: a / b, *columns)
+    alone, alone_error = jackknife(lambda a: a, columns[0])
     low, high = np.searchsorted(angle, [place["window"][0] - 1.0, place["window"][1] + 1.0])
     some = slice(max(low, 0), high)
     peak, peak_error = jackknife(lambda curve: top_of(curve, angle[some], place["window"]), luminance[:, p, some])
@@ -119,6 +121,7 @@ def bow_figures(estimate: Estimate, order: int, place: dict, primary: dict | Non
     return {
         "value": values,
         "error": errors,
+        "luminance_relative_error": float(alone_error / alone) if alone > 0 else 0.0,
         "filter": "along the arc" if s / glow[0] >= q / glow[1] else "across the arc",
         **bins,
     }

@@ -46,6 +46,13 @@ def look(scene, light, estimates, rows, found, *, threads=None) -> None:
             row.place_above_horizon(light.sun.elevation_deg)
             theta = estimates[0].angle_deg[found[row.order]["luminance_bin"]]
             row.scene = _bow(view, lens, row.order + 1, math.radians(theta), row.centre, threads)
+            _add_errors(row.scene, found[row.order]["luminance_relative_error"])
+
+
+def _add_errors(scene: dict, relative: float) -> None:
+    """Standard errors of what is proportional to the bow's luminance; that of what lies behind is far smaller."""
+    names = ("peak_luminance_cd_m2", "contrast_median", "contrast_best")
+    scene["standard_error"] = {name: None if scene[name] is None else scene[name] * relative for name in names}
 
 
 def _view(scene, light, estimates, lens, threads):

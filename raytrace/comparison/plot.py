@@ -16,7 +16,7 @@ from raytrace.files import write_atomic
 _DASHES = ("-", (0, (6, 2)), (0, (3, 1.5)), (0, (1, 1)), (0, (6, 2, 1, 2)), (0, (3, 1, 1, 1)), (0, (8, 3)))
 _GREYS = ("0.0", "0.25", "0.4", "0.2", "0.5", "0.35", "0.55")
 # Luminance of the primary's peak in the strip of colours, as a share of white
-_STRIP_LEVEL = 0.6
+_STRIP_LEVEL = 0.35
 _STRIP_ROWS, _STRIP_COLUMNS = 60, 1800
 
 
