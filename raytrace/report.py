@@ -118,7 +118,7 @@ def machine_report() -> str:
         "numba",
         "llvmlite",
         "scipy",
-        "colour-science",
+        "matplotlib",
         "pvlib",
         "pandas",
         "pillow",

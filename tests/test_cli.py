@@ -89,10 +89,10 @@ def test_python_m_and_the_command_are_one(quick):
 @pytest.mark.parametrize(
     ("arguments", "line"),
     [
-        ([], "raytrace: no command given; what works: render, check, info, or --help"),
+        ([], "raytrace: no command given; what works: render, compare, check, info, or --help"),
         (["rendr", "a"], "raytrace: 'rendr' is no command; what works: \"render\""),
-        (["zzz"], "raytrace: 'zzz' is no command; what works: render or check or info"),
-        (["a\nb"], "raytrace: 'a b' is no command; what works: render or check or info"),
+        (["zzz"], "raytrace: 'zzz' is no command; what works: render or compare or check or info"),
+        (["a\nb"], "raytrace: 'a b' is no command; what works: render or compare or check or info"),
         (
             ["render"],
             "raytrace render: the following arguments are required: SCENE; what works: raytrace render --help",

@@ -12,7 +12,20 @@ import raytrace.optics
 
 ROOT = Path(raytrace.__file__).parent
 FILES = sorted(ROOT.rglob("*.py"))
-STAGES = ("scene", "light", "drops", "optics", "sky", "camera", "preflight", "frame", "report", "cli", "__main__")
+STAGES = (
+    "scene",
+    "light",
+    "drops",
+    "optics",
+    "sky",
+    "camera",
+    "preflight",
+    "frame",
+    "comparison",
+    "report",
+    "cli",
+    "__main__",
+)
 """From left to right; each imports only what stands left of it."""
 APART = {("light", "drops"), ("drops", "light")}
 """Neighbours that know nothing of each other."""
@@ -21,8 +34,9 @@ FOR_ALL = {"errors", "colour", "data", "cast", "jit", "cores", "files", "memory"
 MOST_LINES = 500
 
 ALLOWED = {
-    # the version that made a picture is written into it
+    # the version that made a picture or a comparison is written into it
     ("frame", "__init__"),
+    ("comparison", "__init__"),
     ("report", "__init__"),
     ("cli", "__init__"),
 }
@@ -110,7 +124,8 @@ def test_the_reader_of_imports_reads_all_kinds(tmp_path, monkeypatch):
 
 
 def test_the_public_names():
-    assert raytrace.__all__ == ["InputError", "__version__", "load_scene", "optics", "render", "scattering_table"]
+    names = ["Drop", "InputError", "__version__", "compare", "load_scene", "optics", "render", "scattering_table"]
+    assert raytrace.__all__ == names
     assert dir(raytrace) == sorted(raytrace.__all__)
     for name in raytrace.__all__:
         assert getattr(raytrace, name) is not None
