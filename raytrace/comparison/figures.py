@@ -10,7 +10,7 @@ from raytrace.drops.bow_angle import bow_angle, bow_ray_weight
 RED_NM, VIOLET_NM = 700.0, 400.0
 NAMES = {1: "primary", 2: "secondary", 3: "tertiary", 4: "quaternary"}
 # How far beyond the colours' edges the peak is looked for, and over which width a parabola finds its top [deg]
-_BEYOND_DEG, _TOP_DEG = 1.5, 0.2
+_BEYOND_DEG, _TOP_DEG = 1.5, 0.12
 # Figures by ray counts: those at 550 nm, and those of the whole spectrum
 MONO_FIGURES = (
     "light_share",
