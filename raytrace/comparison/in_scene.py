@@ -100,7 +100,9 @@ def _bow(view, lens, p, theta, centre, threads) -> dict:
     names = ("peak_luminance_cd_m2", "behind_luminance_cd_m2", "contrast_median", "contrast_best")
     if not seen.any():
         out |= dict.fromkeys((*names, "exposure_s", "filter_top", "filter_feet"))
-        out["verdict"] = f"not seen: {_main_reason(why)}"
+        # an arc that is wholly below the horizon is said to be, also where the frame would not show it either
+        below = arc[:, 2].max() <= 0.0
+        out["verdict"] = f"not seen: {'below the horizon' if below else _main_reason(why)}"
         return out
     best = int(np.argmax(np.where(seen, np.nan_to_num(contrast, posinf=1e30), -1.0)))
     total = own[:, 1] + behind

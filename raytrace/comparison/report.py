@@ -195,16 +195,16 @@ class Report:
     def to_text(self) -> str:
         """The report as an aligned table, each row followed by its standard errors."""
         lines = [*self._heading(), ""]
-        cells = [["bow", "", "round", "", *(c[0] for c in _COLUMNS)], ["", "", "", "", *(c[1] for c in _COLUMNS)]]
+        cells = [["bow", "", "round", *(c[0] for c in _COLUMNS)], ["", "", "", *(c[1] for c in _COLUMNS)]]
         for row in self.rows:
             if row.centre is None:
-                cells.append([str(row.order), row.name, "none", "", *("-" for _ in _COLUMNS)])
+                cells.append([str(row.order), row.name, "none", *("-" for _ in _COLUMNS)])
                 continue
             round_ = {"antisolar": "antisun", "sun": "sun"}[row.centre]
-            cells.append([str(row.order), row.name, round_, "", *(_format(getattr(row, c[2]), c[3]) for c in _COLUMNS)])
+            cells.append([str(row.order), row.name, round_, *(_format(getattr(row, c[2]), c[3]) for c in _COLUMNS)])
             errors = (row.standard_error.get(c[2]) for c in _COLUMNS)
-            cells.append(["", "", "", "+-", *("" if e is None or e == 0 else f"{e:.1g}" for e in errors)])
-        lines += _aligned(cells, left=4)
+            cells.append(["", "", "+-", *("" if e is None or e == 0 else f"{e:.1g}" for e in errors)])
+        lines += _aligned(cells, left=3)
         lines += ["", *self._notes()]
         return "\n".join(lines)
 

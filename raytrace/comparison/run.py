@@ -23,6 +23,7 @@ from raytrace.comparison.report import Report, Row
 from raytrace.drops.sizes import drop_sizes
 from raytrace.drops.water import refractive_index
 from raytrace.errors import InputError
+from raytrace.light.spectrum import before_loading_beside
 from raytrace.optics.scattering import wavelengths_nm
 
 MOST_ORDERS = 12
@@ -84,6 +85,7 @@ def compare(
     seed = scene.optics.seed if seed is None else int(seed)
     wavelength = wavelengths_nm(scene.optics.model_copy(update={"wavelength_step_nm": _STEP_NM}))
     paths = max(orders + 2, _FEWEST_PATHS, 0 if is_drop else scene.optics.paths)
+    before_loading_beside()
     with ThreadPoolExecutor(1) as pool:
         # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
         spectrum = pool.submit(_light, scene, wavelength, is_drop and subject.sun_elevation_deg is None)

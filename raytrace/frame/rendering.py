@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import contextlib
 import sys
 import time
 from concurrent.futures import ThreadPoolExecutor
@@ -14,7 +13,7 @@ from raytrace.camera import develop
 from raytrace.camera.lens import azimuth_span, make_lens, row_directions
 from raytrace.frame.frame import Frame
 from raytrace.jit import run_all
-from raytrace.light.spectrum import illumination
+from raytrace.light.spectrum import before_loading_beside, illumination
 from raytrace.light.sun import antisolar
 from raytrace.optics.scattering import scattering_table, wavelengths_nm
 from raytrace.sky.radiance import layer_names, layered_radiance, order_xyz, prepare_view, with_sky_illuminance
@@ -57,10 +56,7 @@ def render(
     preflight(scene, layers=layers)
     wavelength = wavelengths_nm(scene.optics)
     tables, phases, rays = [], [], 0
-    with contextlib.suppress(ImportError):
-        # pvlib loads it, and it silences a warning of its own while it loads. Filters of warnings belong to all threads
-        # and the compiler in this one sets them too, so it is loaded here.
-        import requests  # noqa: F401
+    before_loading_beside()
     # the spectrum's libraries take a second to load, which the first table's tracing or reading can overlap
     with ThreadPoolExecutor(1) as pool:
         spectrum = pool.submit(illumination, scene, wavelength)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from functools import lru_cache
 from typing import TYPE_CHECKING, NamedTuple
 
@@ -103,6 +104,16 @@ def illumination(scene: Scene, wavelength_nm: np.ndarray) -> Illumination:
         sun=sun,
         airmass=airmass,
     )
+
+
+def before_loading_beside() -> None:
+    """To be called before the spectrum's libraries are loaded in a thread beside others.
+
+    pvlib loads requests, which silences a warning of its own while it loads. Filters of warnings belong to all threads
+    and the compiler sets them too, so it is loaded by the thread that calls this.
+    """
+    with contextlib.suppress(ImportError):
+        import requests  # noqa: F401
 
 
 def extraterrestrial(wavelength_nm: np.ndarray) -> np.ndarray:
