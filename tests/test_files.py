@@ -9,7 +9,7 @@ import sys
 import pytest
 
 from raytrace import files
-from raytrace.files import write_atomic
+from raytrace.files import is_same_file, write_atomic, write_together
 
 NAMELESS = hasattr(os, "O_TMPFILE") and os.path.isdir(files._OPEN_FILES)
 POSIX = pytest.mark.skipif(os.name != "posix", reason="modes and signals of POSIX")
@@ -189,3 +189,78 @@ def test_the_old_file_stands_until_the_new_one_is_on_the_disk(tmp_path, monkeypa
     watch("replace")
     write_atomic(path, b"new")
     assert steps == [("fsync", b"old"), ("replace", b"old")] and path.read_bytes() == b"new"
+
+
+# --- several at once, links, and what is no regular file
+
+
+def test_several_files(tmp_path):
+    write_together([(tmp_path / "a", b"one"), (tmp_path / "b", lambda file: file.write(b"two"))])
+    assert names(tmp_path) == ["a", "b"] and (tmp_path / "b").read_bytes() == b"two"
+    write_together([(tmp_path / "a", b"three"), (tmp_path / "b", b"four")])
+    assert names(tmp_path) == ["a", "b"] and (tmp_path / "a").read_bytes() == b"three"
+    write_together([])
+
+
+@pytest.mark.parametrize("failure", [OSError(errno.ENOSPC, "no"), KeyboardInterrupt()])
+@pytest.mark.parametrize("step", ["content", "replace"])
+def test_all_files_or_none(tmp_path, monkeypatch, failure, step):
+    (tmp_path / "a").write_bytes(b"old")
+
+    def fail(*arguments):
+        raise failure
+
+    real = os.replace
+    if step == "replace":
+        monkeypatch.setattr(os, "replace", lambda one, other: fail() if other.name == "c" else real(one, other))
+    with pytest.raises(type(failure)):
+        write_together(
+            [(tmp_path / "a", b"new"), (tmp_path / "b", b"new"), (tmp_path / "c", fail if step == "content" else b"")]
+        )
+    assert names(tmp_path) == ["a"] and (tmp_path / "a").read_bytes() == b"old"
+
+
+@POSIX
+def test_a_link_is_kept_and_its_file_written(tmp_path):
+    (tmp_path / "folder").mkdir()
+    (tmp_path / "folder" / "a").write_bytes(b"old")
+    (tmp_path / "link").symlink_to("folder/a")
+    (tmp_path / "dangling").symlink_to("folder/b")
+    for link, name in (("link", "a"), ("dangling", "b")):
+        write_atomic(tmp_path / link, b"new")
+        assert (tmp_path / link).is_symlink() and (tmp_path / "folder" / name).read_bytes() == b"new"
+    assert names(tmp_path) == ["dangling", "folder", "link"] and names(tmp_path / "folder") == ["a", "b"]
+    (tmp_path / "loop").symlink_to("loop")
+    with pytest.raises(OSError):
+        write_atomic(tmp_path / "loop", b"")
+
+
+@POSIX
+def test_what_is_no_regular_file_stays(tmp_path):
+    os.mkfifo(tmp_path / "pipe")
+    (tmp_path / "link").symlink_to("pipe")
+    reader, writer = os.pipe()
+    try:
+        for path in (tmp_path / "pipe", tmp_path / "link", f"{files._OPEN_FILES}/{writer}"):
+            if os.path.lexists(path):
+                with pytest.raises(OSError, match="is no regular file"):
+                    write_together([(tmp_path / "a", b""), (path, b"")])
+    finally:
+        os.close(reader)
+        os.close(writer)
+    assert names(tmp_path) == ["link", "pipe"] and (tmp_path / "pipe").is_fifo() and (tmp_path / "link").is_symlink()
+
+
+@POSIX
+def test_one_file_by_several_names(tmp_path):
+    (tmp_path / "a").write_bytes(b"")
+    (tmp_path / "soft").symlink_to("a")
+    os.link(tmp_path / "a", tmp_path / "hard")
+    (tmp_path / "dangling").symlink_to("b")
+    a = tmp_path / "a"
+    assert (
+        is_same_file(a, tmp_path / "soft")
+        and is_same_file(a, tmp_path / "hard")
+        and is_same_file(a, tmp_path / "." / "a")
+    )
+    assert is_same_file(tmp_path / "dangling", tmp_path / "b") and not is_same_file(a, tmp_path / "b")
