@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 import dataclasses
-import math
 
-from raytrace.errors import InputError
+from raytrace.comparison.asked import check_drop
 
 
 @dataclasses.dataclass(frozen=True)
@@ -36,24 +35,7 @@ class Drop:
     refractive_index: float | None = None
 
     def __post_init__(self):
-        problems = []
-        for name, low, high, none in (
-            ("diameter_mm", 0.02, 8.0, False),
-            ("temperature_c", 0.0, 50.0, False),
-            ("sun_elevation_deg", 0.0, 90.0, True),
-            ("refractive_index", 1.1, 1.9, True),
-        ):
-            value = getattr(self, name)
-            if value is None and none:
-                continue
-            number = isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
-            if not number or not low <= value <= high or (name == "sun_elevation_deg" and value == 0):
-                above = "above " if name == "sun_elevation_deg" else ""
-                problems.append(
-                    f"{name}: {value!r} given, which is out of range; what works: {above}{low:g} to {high:g}"
-                )
-        if problems:
-            raise InputError(*problems)
+        check_drop({field.name: getattr(self, field.name) for field in dataclasses.fields(self)})
 
     def scene(self):
         """A scene that holds this drop alone, with default air."""
