@@ -15,8 +15,18 @@ BYTES_PER_LAYER_PIXEL = 12
 TABLES_AT_ONCE = 3.2
 
 
-def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
-    """Refuse a scene that cannot be rendered here.
+def preflight(scene, *, layers: bool = False, name: str = "scene", need: float | None = None) -> None:
+    """Refuse a scene that cannot be rendered here, or, where no picture is made, cannot be computed with.
+
+    Parameters
+    ----------
+    scene : Scene
+    layers : bool
+        Whether the picture's layers are kept.
+    name : str
+        What problems call the scene.
+    need : float, optional
+        Memory that is needed where no picture is made, without the plate's; pixels are not counted then [B].
 
     Raises
     ------
@@ -42,8 +52,15 @@ def preflight(scene, *, layers: bool = False, name: str = "scene") -> None:
             "read from its file, with the picture still in place"
         )
         raise InputError(*problems)
-    need, free = needed_bytes(scene, layers=layers), free_bytes()
-    if need > free:
+    free = free_bytes()
+    if need is not None:
+        need += _plate_bytes(scene)
+        if need > free:
+            problems.append(
+                f"{name}: would need {need / 1e9:.1f} GB of memory and {free / 1e9:.1f} GB are free; what works: fewer "
+                "tables [[rain]], a smaller plate, or a machine with more free memory"
+            )
+    elif (need := needed_bytes(scene, layers=layers)) > free:
         width, height = scene.camera.width_px, scene.camera.height_px
         spare = free - (need - width * height * _per_pixel(scene, layers))
         works = "a machine with more free memory"

@@ -1,6 +1,7 @@
 """Figures of the bows against handbooks, closed forms and a twin without random numbers."""
 
 import dataclasses
+import json
 import math
 
 import numpy as np
@@ -229,6 +230,19 @@ def test_same_seed_same_figures_on_any_threads():
 def test_arguments_that_cannot_be():
     for build, told in (
         (lambda: raytrace.Drop(diameter_mm=math.nan), "diameter_mm: nan given.*0.02 to 8"),
+        (lambda: raytrace.Drop(diameter_mm=10**400), "diameter_mm: a whole number of 1329 bits given.*0.02 to 8"),
+        (lambda: raytrace.Drop(diameter_mm=10**5000), "diameter_mm: a whole number of 16610 bits given"),
+        (lambda: raytrace.Drop(diameter_mm="1\n"), "diameter_mm: '1.*n' given"),
+        (lambda: raytrace.compare("x"), "scene_or_drop: 'x' given, which is neither a scene nor a drop.*load_scene"),
+        (lambda: raytrace.compare(raytrace.Drop), "scene_or_drop: <class .*neither a scene nor a drop"),
+        (lambda: raytrace.compare(orders=True), "orders: True given.*1 to 12"),
+        (lambda: raytrace.compare(orders=2.0), "orders: 2.0 given.*1 to 12"),
+        (lambda: raytrace.compare(tolerance=True), "tolerance: True given"),
+        (lambda: raytrace.compare(seed=True), "seed: True given.*from 0 to 9223372036854775807"),
+        (lambda: raytrace.compare(threads=0), "threads: 0 given.*from 1 to"),
+        (lambda: raytrace.compare(threads=True), "threads: True given"),
+        (lambda: raytrace.compare(most_rays=(0, 0)), r"most_rays: \(0, 0\) given.*200000 and 24000"),
+        (lambda: raytrace.compare(most_rays=5), "most_rays: 5 given"),
         (lambda: raytrace.Drop(temperature_c=-1), "temperature_c: -1 given.*0 to 50"),
         (lambda: raytrace.Drop(sun_elevation_deg=0), "sun_elevation_deg: 0 given.*above 0 to 90"),
         (lambda: raytrace.Drop(refractive_index=3.0), "refractive_index: 3.0 given.*1.1 to 1.9"),
@@ -240,4 +254,52 @@ def test_arguments_that_cannot_be():
     ):
         with pytest.raises(InputError, match=told) as caught:
             build()
-        assert all("\n" not in line for line in caught.value.problems)
+        assert all(line.isprintable() and "; what works: " in line for line in caught.value.problems)
+    # numpy's numbers are numbers
+    assert raytrace.Drop(diameter_mm=np.float32(0.5)).scene().rain[0].diameter_mm == 0.5
+    assert raytrace.compare(orders=np.int64(1), tolerance=np.float64(0.1), seed=np.uint8(0)).rows[0].light_share > 0.03
+
+
+def test_a_bow_beside_the_axis_is_not_the_axis():
+    """Of n = 1.9 the primary stands 1.49 degrees from the antisolar point, where light also gathers on the axis."""
+    report = raytrace.compare(raytrace.Drop(refractive_index=1.9), orders=1)
+    row = report.rows[0]
+    # bow ray by cos^2 i = (n^2 - 1)/3 (Descartes): the peak after the disc is within its radius on the bright side
+    i = math.acos(math.sqrt((1.9**2 - 1) / 3))
+    radius = 180 - math.degrees(2 * i + math.pi - 4 * math.asin(math.sin(i) / 1.9))
+    assert 0 < radius - row.peak_deg < 0.27
+    assert report.rays[0] < 50_000_000 and not row.missed
+    # the axis itself is brighter than the bow
+    curve = report.curves["mono_sr"][2].sum(axis=0)
+    assert curve[-3:].mean() > 2 * row.peak_radiance_sr_550nm
+
+
+def test_a_bow_on_the_axis_has_no_figure_of_its_peak():
+    # the tenth of n = 1.1 stands 0.75 degrees from the antisolar point (recomputed from Descartes' formula)
+    drop = raytrace.Drop(refractive_index=1.1, sun_elevation_deg=20.0)
+    report = raytrace.compare(drop, orders=10, tolerance=0.5)
+    row = report.rows[9]
+    assert row.red_edge_deg == pytest.approx(0.75, abs=0.005) and row.light_share > 0
+    assert row.peak_deg is row.polarisation is row.peak_ratio_luminance is row.filter is row.top_elevation_deg is None
+    text = " ".join(report.to_text().split())
+    assert "10th: its peak cannot be told from the light that gathers at the antisolar point" in text
+    data = json.loads(report.to_json())["orders"][9]
+    assert data["centre"] == "antisolar" and data["peak_deg"] is None and data["standard_error"]["peak_deg"] is None
+    assert data["standard_error"]["light_share"] > 0 and len(report.png()) > 10_000
+
+
+def test_the_peak_is_not_looked_for_on_the_axis():
+    angle = np.linspace(0, 180, 4501)[1:] - 0.02
+    focus = 1 / np.maximum(180 - angle, 0.02)
+    place = {"ray_deg": 178.5, "window": (177.0, 180.0)}
+    bow = np.exp(-0.5 * ((angle - 178.6) / 0.1) ** 2)
+    low, high = figures.off_axis(focus + bow, angle, place, 0.2665)
+    assert low == 177.0 and 178.7 < high < 179.3
+    assert figures.top_of(focus + bow, angle, (low, high)) == pytest.approx(178.6, abs=0.03)
+    # a flank without a top, no light, and a bow that the disc smears over the axis
+    assert figures.off_axis(focus, angle, place, 0.2665) is None
+    assert figures.off_axis(np.zeros_like(angle), angle, place, 0.2665) is None
+    assert figures.off_axis(focus + bow, angle, place | {"ray_deg": 179.8}, 0.2665) is None
+    # far from the axis the window stays as it was
+    place = {"ray_deg": 138.0, "window": (136.0, 141.0)}
+    assert figures.off_axis(focus, angle, place, 0.2665) == (136.0, 141.0)

@@ -8,9 +8,12 @@ from skies import make_scene
 
 import raytrace
 from raytrace.camera.lens import direction_pixels
-from raytrace.comparison import in_scene
+from raytrace.comparison import in_scene, run
+from raytrace.comparison.estimate import BLOCKS
 from raytrace.comparison.in_scene import EYE_CONTRAST, VISIBILITY_CONTRAST, verdict
 from raytrace.light.sun import antisolar, direction, sun_place
+from raytrace.sky.radiance import layered_radiance
+from raytrace.sky.shade import FIRST_ORDER
 
 RAIN = {"extinction_per_km": 0.5, "near_m": 300.0, "far_m": 2000.0, "top_m": 3000.0}
 WIDE = {"field_of_view_deg": 110.0, "elevation_deg": 15.0, "width_px": 220, "height_px": 150}
@@ -107,33 +110,156 @@ def test_verdicts_at_the_thresholds():
     assert verdict(None).startswith("stands before black")
 
 
-def test_filter_against_mueller_matrices(monkeypatch):
+def test_filter_against_mueller_matrices():
+    rng = np.random.default_rng(4)
+    drops, lit, rest = rng.uniform(0.1, 1, (2, 5, 2)), rng.uniform(0.1, 1, (3, 2)), rng.uniform(0.1, 1, 3)
+    arc, tangents = in_scene._circle(direction(70.0, -20.0), math.radians(42.0))
+    for p in (2, 3):
+        for at in range(3):
+            for axis in (tangents[at], tangents[100], tangents[300]):
+                got = in_scene._filtered(drops, lit, rest, p, arc, tangents, axis, at=at)
+                axis = axis - (axis @ arc[at]) * arc[at]
+                axis /= np.linalg.norm(axis)
+                across = np.cross(arc[at], tangents[at])
+                angle = math.atan2(axis @ across, axis @ tangents[at])
+                # first row of an ideal polariser's Mueller matrix, reference along the arc
+                row = 0.5 * np.array([1, math.cos(2 * angle), math.sin(2 * angle)])
+                stokes = [[(s + q, s - q, 0.0) for s, q in curtain] for curtain in drops]
+                orders = np.array([sum(row @ stokes[c][k] * lit[at, c] for c in range(2)) for k in range(5)])
+                expected = orders[p] / (0.5 * rest[at] + orders.sum() - orders[p])
+                assert got == pytest.approx(expected, rel=1e-9)
+
+
+SPRAY = {"water": "sea", "size_law": "single", "diameter_mm": 0.6, "extinction_per_km": 3.0, "near_m": 30.0,
+         "far_m": 100.0, "top_m": 60.0, "edge_m": 10.0, "edge_top_m": 10.0}  # fmt: skip
+
+
+def seen_with(curtains, **more):
+    """A scene's estimates and sight as `compare` makes them, without the rounds that follow."""
+    scene = make_scene((20.0, 250.0), rain=curtains, sky={"model": "uniform"}, camera=WIDE)
     kept = {}
-    real = in_scene._filtered
+    real = run.Sight.bow
 
-    def spy(light, p, arc, tangents, axis, *, at):
-        out = real(light, p, arc, tangents, axis, at=at)
-        kept.setdefault(p, []).append((light[at].copy(), arc[at], tangents[at], axis, out))
-        return out
+    def spy(self, estimates, order, centre, peak_bin):
+        kept.update(sight=self, estimates=estimates, bins=kept.get("bins", {}) | {order: (centre, peak_bin)})
+        return real(self, estimates, order, centre, peak_bin)
 
-    monkeypatch.setattr(in_scene, "_filtered", spy)
-    bows(make_scene((20.0, 250.0), rain=RAIN, ground={"cover": "plain"}, camera=WIDE))
-    assert set(kept) == {2, 3}
-    for p, found in kept.items():
-        for light, view, tangent, axis, got in found:
-            axis = axis - (axis @ view) * view
-            axis /= np.linalg.norm(axis)
-            across = np.cross(view, tangent)
-            angle = math.atan2(axis @ across, axis @ tangent)
-            # first row of an ideal polariser's Mueller matrix, reference along the arc
-            row = 0.5 * np.array([1, math.cos(2 * angle), math.sin(2 * angle)])
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(run.Sight, "bow", spy)
+        # what is asked of these holds for any number of rays and wavelengths
+        patch.setattr(run, "FIRST_RAYS", (16_000, 3_200))
+        patch.setattr(run, "_STEP_NM", 20.0)
+        report = raytrace.compare(scene, tolerance=0.5, **more)
+    return report, kept
 
-            def through(along, across_, row=row):
-                return row @ [along + across_, along - across_, 0.0]
 
-            orders = np.array([through(s, q) for s, q in light[6:, [0, 2]]])
-            rest = 0.5 * light[:6, 1].sum()
-            assert got == pytest.approx(orders[p] / (rest + orders.sum() - orders[p]), rel=1e-9)
+@pytest.mark.parametrize("count", [1, 2, 4])
+def test_light_along_the_arc_is_the_kernels(count):
+    """Sunlit rain times the drops' light is what the kernel of the sky gives for whole tables."""
+    curtains = [RAIN, SPRAY, {**RAIN, "water": "sea"}, {**RAIN, "temperature_c": 30.0}][:count]
+    report, kept = seen_with(curtains, orders=1)
+    estimates, sight = kept["estimates"], kept["sight"]
+    tables = [np.repeat(e.colour[1].mean(axis=0).sum(axis=1)[..., None], 3, axis=-1) for e in estimates]
+    view = sight._view._replace(orders=np.ascontiguousarray(np.stack(tables)))
+    for row in report.rows:
+        _, peak_bin = kept["bins"][row.order]
+        arc, _, rest, lit, _ = sight._arcs[row.order, peak_bin]
+        light = layered_radiance(view, arc, np.ones(len(arc), dtype=bool), sight._lens.pixel_rad)[..., 1]
+        drops = np.stack([e.colour[1, :, :, :, peak_bin].mean(axis=0) for e in estimates])
+        own, behind = in_scene._along(drops, lit, rest, row.order + 1)
+        # the kernel interpolates between bins by an arc cosine: good to a millionth of a steep curve
+        np.testing.assert_allclose(own, light[:, FIRST_ORDER + row.order + 1], rtol=2e-5, atol=1e-9)
+        np.testing.assert_allclose(own + behind, light.sum(axis=1), rtol=2e-5)
+        assert lit.shape == (360, count) and (lit.max(axis=0) > 0).all()
+
+
+def test_every_curtain_is_traced_and_counts():
+    one = seen_with([RAIN], orders=1)[0]
+    both, kept = seen_with([RAIN, SPRAY], orders=1)
+    first, second = kept["estimates"]
+    assert all(e.mono.sum() > 0 and e.colour.sum() > 0 for e in (first, second))
+    assert first.rays[1] == second.rays[1]
+    for alone, row in zip(one.rows, both.rows, strict=True):
+        # the spray's skylight and glow are behind the rain's bow
+        assert row.scene["behind_luminance_cd_m2"] != alone.scene["behind_luminance_cd_m2"]
+        for name in in_scene.LIGHT_FIGURES:
+            assert row.scene[name] > 0 and 0 < row.scene["standard_error"][name] < 0.05 * row.scene[name]
+        for name in in_scene.FILTERS:
+            assert set(row.scene[name]["standard_error"]) == set(in_scene.FILTER_FIGURES)
+            assert all(error > 0 for error in row.scene[name]["standard_error"].values())
+    assert "the first of its curtains" in both.to_text() and "its rain" in one.to_text()
+
+
+def test_what_is_no_number_is_never_told():
+    report, kept = seen_with([RAIN], orders=1)
+    sight, estimates = kept["sight"], kept["estimates"]
+    centre, peak_bin = kept["bins"][1]
+    arc, tangents, rest, lit, grounded = sight._arcs[1, peak_bin]
+    for k, broken in ((2, np.full_like(rest, np.nan)), (3, np.full_like(lit, np.inf))):
+        parts = [arc, tangents, rest, lit, grounded]
+        parts[k] = broken
+        sight._arcs[1, peak_bin] = tuple(parts)
+        with pytest.raises(ArithmeticError, match="not a number"):
+            sight.bow(estimates, 1, centre, peak_bin)
+    report.rows[0].polarisation = math.nan
+    with pytest.raises(ValueError):
+        report.to_json()
+
+
+def test_standard_errors_in_a_scene_are_those_of_many_runs():
+    """Scatter of the figures over 200 made-up runs against what each run says."""
+    rng = np.random.default_rng(11)
+    arc, tangents = in_scene._circle(direction(70.0, -20.0), math.radians(42.0))
+    why = np.full(360, "no rain", dtype=object)
+    why[120:240] = ""
+    lit = np.stack([np.linspace(0.2, 1.0, 360), np.linspace(0.9, 0.1, 360)], axis=1)
+    rest = np.linspace(3.0, 5.0, 360)
+    true = rng.uniform(0.5, 2.0, (2, 4, 2))
+    values, errors = [], []
+    for _ in range(200):
+        drops = true * rng.normal(1.0, 0.2, (BLOCKS, 2, 4, 2))
+        out = in_scene._seen(drops, lit, rest, 2, arc, tangents, why)
+        keys = [(out, out["standard_error"], k) for k in in_scene.LIGHT_FIGURES]
+        keys += [(out[f], out[f]["standard_error"], k) for f in in_scene.FILTERS for k in in_scene.FILTER_FIGURES]
+        values.append([v[k] for v, _, k in keys])
+        errors.append([e[k] for _, e, k in keys])
+    # the scatter of 200 is itself known to 1/sqrt(400) = 5 %; three and a half of these over eight figures
+    np.testing.assert_allclose(np.sqrt(np.mean(np.square(errors), axis=0)), np.std(values, axis=0, ddof=1), rtol=0.18)
+
+
+def test_rays_are_added_until_the_scene_is_known_too():
+    scene = make_scene((20.0, 250.0), rain=RAIN, sky={"model": "uniform"}, camera=WIDE)
+    fine = raytrace.compare(scene, orders=1, tolerance=5e-5, most_rays=(200_000, 48_000))
+    assert fine.rays[1] == 48_000 and fine.rows[0].standard_error["peak_ratio_luminance"] == 0
+    short = raytrace.compare(scene, orders=1, tolerance=1e-6, most_rays=(200_000, 24_000))
+    assert "peak_luminance_cd_m2" in short.rows[0].scene["tolerance_missed"]
+    assert "filter_feet.contrast" in short.rows[0].scene["tolerance_missed"]
+    assert "primary, in the scene: peak_luminance_cd_m2" in short.to_text()
+    assert all(len(line) <= 120 for line in short.to_text().splitlines())
+
+
+def test_no_rain_is_said_before_the_frame():
+    camera = {**WIDE, "field_of_view_deg": 30.0, "elevation_deg": 18.0}
+    for ground in ("plain", "none"):
+        dry = make_scene(
+            (20.0, 250.0), rain={**RAIN, "extinction_per_km": 0.0}, ground={"cover": ground}, camera=camera
+        )
+        row = bows(dry, orders=1)[0]
+        assert row.scene["verdict"] == "not seen: no sunlit rain there"
+        assert row.scene["hidden_by"]["edge of the frame"] > 180
+    away = make_scene((20.0, 250.0), rain=RAIN, camera={**camera, "azimuth_deg": 250.0})
+    assert bows(away, orders=1)[0].scene["verdict"] == "not seen: outside the frame"
+
+
+def test_pixels_cost_no_memory(monkeypatch):
+    big = {**WIDE, "width_px": 32_768, "height_px": 32_768}
+    monkeypatch.setattr("raytrace.preflight.free_bytes", lambda: 1.0e9)
+    assert bows(make_scene((20.0, 250.0), rain=RAIN, camera=big), orders=1)[0].scene["contrast_best"] > 0
+    monkeypatch.setattr("raytrace.preflight.free_bytes", lambda: 0.2e9)
+    with pytest.raises(
+        raytrace.InputError, match=r"would need 0\.. GB of memory and 0\.2 GB are free; what works: fewer"
+    ):
+        bows(make_scene((20.0, 250.0), rain=RAIN, camera=big), orders=1)
 
 
 def test_the_best_filter_is_the_best_of_all_angles():
@@ -167,6 +293,8 @@ def test_exposure_is_iso_12232s():
 def test_any_sky_and_sun(sky, sun):
     rows = bows(make_scene(sun, rain=[RAIN, {**RAIN, "water": "sea"}], sky=sky, camera=WIDE), orders=3)
     for row in rows:
+        if row.scene["visible"]:
+            assert all(row.scene[name] is not None for name in in_scene.LIGHT_FIGURES[:2])
         assert row.scene["verdict"] and -90 <= row.top_elevation_deg <= 90
         assert all(value is None or np.isfinite(value) for value in row.scene["standard_error"].values())
 

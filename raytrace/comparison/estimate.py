@@ -20,10 +20,9 @@ from raytrace.random_stream import stream_state
 
 BINS = 4_500
 MONO_NM = 550.0
-# Rays of the first round, and at most, at 550 nm and at each wavelength of the spectrum
-FIRST_RAYS = (200_000, 24_000)
-MOST_RAYS = (200_000_000, 6_000_000)
 _PIECES = 4
+# Of a process that compares, without what its curtains' estimates take; measured, rounded up
+_FIXED_BYTES = 350e6
 # stream of the rounds, apart from those of the wavelengths
 _ROUND_DIMENSION = 2_000_003
 
@@ -63,6 +62,7 @@ class Estimate:
     ):
         self.index, self.wavelength_nm, self.mono_index = np.asarray(index), np.asarray(wavelength_nm), mono_index
         self.diameter_mm, self.paths, self.seed = diameter_mm, paths, seed
+        self.disc_radius_deg = disc_diameter_deg / 2
         self.edges_deg = np.linspace(0.0, 180.0, BINS + 1)
         self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
         self._threads = core_count() if threads is None else threads
@@ -142,6 +142,13 @@ class Estimate:
     def _count(self, kind, rays):
         self.rays[kind] += rays
         self._rounds[kind] += 1
+
+
+def needed_bytes(paths: int, curtains: int) -> float:
+    """Memory that estimates of that many curtains take at the peak, when rays in colour are merged [B]."""
+    each = 8.0 * BLOCKS * paths * 2 * BINS
+    # 550 nm and XYZ for each curtain; the new XYZ, their change and what is folded for one
+    return _FIXED_BYTES + curtains * 4 * each + 8 * each
 
 
 def jackknife(figure, *blocks):

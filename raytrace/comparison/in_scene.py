@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import math
-import textwrap
 
 import numpy as np
 
 from raytrace.camera.develop import SATURATION_CD_M2
 from raytrace.camera.lens import direction_pixels, make_lens
+from raytrace.comparison.estimate import jackknife
+from raytrace.comparison.figures import relative_error
 from raytrace.light.sun import antisolar
 from raytrace.sky.radiance import layered_radiance, prepare_view
 from raytrace.sky.shade import FIRST_ORDER
@@ -18,115 +19,127 @@ from raytrace.sky.shade import FIRST_ORDER
 EYE_CONTRAST, VISIBILITY_CONTRAST = 0.02, 0.05
 # Position angles round the arc, 0 at the top, clockwise seen from the observer [deg]
 POSITIONS_DEG = np.arange(-180.0, 180.0, 1.0)
-# Rain counts as there where it gives this share of the light that it gives at best
-_LIT_SHARE = 0.01
+_STEP_DEG = float(POSITIONS_DEG[1] - POSITIONS_DEG[0])
+# The bow counts as there where it is at least this share as bright as at its best
+LIT_SHARE = 0.01
 # What the suggested exposure puts the brightest part of the arc at, and the lens and speed that it is told for
-_LEVEL, _F_NUMBER, _ISO = 0.5, 8.0, 100.0
+LEVEL, F_NUMBER, ISO = 0.5, 8.0, 100.0
 SECTIONS = ("horizon", "ground", "no rain", "edge of the frame")
+# Figures with a standard error, and those of a filter, by the key of the filter
+LIGHT_FIGURES = ("peak_luminance_cd_m2", "behind_luminance_cd_m2", "contrast_median", "contrast_best")
+FILTERS, FILTER_FIGURES = ("filter_top", "filter_feet"), ("contrast", "contrast_at_the_other")
+# The widest plate that is read for its mean [px]
+_PLATE_PX = 512
 
 
-def look(scene, light, estimates, rows, found, *, threads=None) -> None:
-    """Fill in what each bow is in a scene.
+class Sight:
+    """The scene as it is seen along arcs, made once; what the drops send is put in as it becomes known.
 
     Parameters
     ----------
     scene : Scene
     light : Illumination
-    estimates : sequence of Estimate
-        One a curtain.
-    rows : list of Row
-        Their `scene` is written.
-    found : dict of int to dict
-        Figures by order, from `bow_figures`.
+    threads : int, optional
     """
-    lens = make_lens(scene.camera, antisolar(light.sun)[0])
-    view = _view(scene, light, estimates, lens, threads)
-    for row in rows:
-        if row.centre is not None:
-            row.place_above_horizon(light.sun.elevation_deg)
-            theta = estimates[0].angle_deg[found[row.order]["luminance_bin"]]
-            row.scene = _bow(view, lens, row.order + 1, math.radians(theta), row.centre, threads)
-            _add_errors(row.scene, found[row.order]["luminance_relative_error"])
+
+    def __init__(self, scene, light, threads=None):
+        self._scene, self._light, self._threads = scene, light, threads
+        self._lens = make_lens(scene.camera, antisolar(light.sun)[0])
+        self._rains = any(rain.extinction_per_km != 0.0 for rain in scene.rain)
+        self._view = None
+        self._arcs = {}
+
+    def bow(self, estimates, order: int, centre: str, peak_bin: int | None) -> dict:
+        """What one bow is in the scene.
+
+        Parameters
+        ----------
+        estimates : sequence of Estimate
+            One a curtain.
+        order : int
+        centre : str
+            "antisolar" or "sun".
+        peak_bin : int or None
+            Bin of the scattering angle of the luminance peak; None where there is none.
+
+        Returns
+        -------
+        dict
+            As the README has it, but for `tolerance_missed`.
+
+        Raises
+        ------
+        ArithmeticError
+            If any of the light is no number.
+        """
+        if peak_bin is None:
+            return _unseen("not told: its peak cannot be told from the light on the axis", [], None)
+        if (order, peak_bin) not in self._arcs:
+            theta = math.radians(estimates[0].angle_deg[peak_bin])
+            self._arcs[order, peak_bin] = self._arc(estimates, theta, centre)
+        arc, tangents, rest, lit, grounded = self._arcs[order, peak_bin]
+        p = order + 1
+        # (blocks, curtains, paths, polarisation): what the drops send per unit of sunlit rain
+        drops = np.stack([estimate.colour[1, :, :, :, peak_bin] for estimate in estimates], axis=1)
+        _all_finite(rest, lit, drops)
+        own, _ = _along(drops.mean(axis=0), lit, rest, p)
+        why = _sections(arc, direction_pixels(self._lens, arc)[2], own, grounded, self._rains)
+        seen = why == ""
+        if not seen.any():
+            # an arc that is wholly below the horizon is said to be, also where the frame would not show it either
+            below = arc[:, 2].max() <= 0.0
+            return _unseen(f"not seen: {'below the horizon' if below else _main_reason(why)}", [], why)
+        return _seen(drops, lit, rest, p, arc, tangents, why)
+
+    def _arc(self, estimates, theta, centre):
+        """Directions of an arc and its tangents; luminance but for sunlit drops, sunlit rain by curtain, ground."""
+        if self._view is None:
+            self._view = self._prepare(estimates)
+        view = self._view
+        sun = np.array(view.sky.sun)
+        arc, tangents = _circle(*((-sun, math.pi - theta) if centre == "antisolar" else (sun, theta)))
+        plate = np.full((len(arc), 3), view.sky.uniform, dtype=np.float32) if view.has_plate else None
+        inside = np.ones(len(arc), dtype=bool)
+        light = layered_radiance(view, arc, inside, self._lens.pixel_rad, plate, threads=self._threads)
+        luminance = light[:, :FIRST_ORDER, 1]
+        # what the sky layers leave dark is ground
+        grounded = (view.cover.kind > 0) & (luminance[:, 3:5].sum(axis=1) > luminance[:, [0, 2]].sum(axis=1))
+        curtains = view.orders.shape[0]
+        lit = light[:, FIRST_ORDER:].reshape(len(arc), -1)[:, :curtains]
+        return arc, tangents, luminance.sum(axis=1), np.ascontiguousarray(lit), grounded
+
+    def _prepare(self, estimates):
+        """The sky with, in place of each order's XYZ, a mark for each curtain: three curtains to an order."""
+        curtains = len(estimates)
+        marks = np.zeros((curtains, -(-curtains // 3), 2, 3))
+        for c in range(curtains):
+            marks[c, c // 3, :, c % 3] = 1.0
+        phases = [estimate.mono.mean(axis=0).sum(axis=(0, 1)) for estimate in estimates]
+        plate_xyz = None
+        if self._scene.sky.model == "plate":
+            from raytrace.frame.rendering import read_plate
+
+            # only its mean is used: the frame's pixels are not
+            camera = self._scene.camera
+            width, height = (max(8, min(px, _PLATE_PX)) for px in (camera.width_px, camera.height_px))
+            small = camera.model_copy(update={"width_px": width, "height_px": height})
+            lens = make_lens(small, antisolar(self._light.sun)[0])
+            plate_xyz = read_plate(self._scene, lens).mean(axis=(0, 1), dtype=np.float64)
+        return prepare_view(
+            self._scene, self._light, list(marks), phases, self._lens.pixel_rad, plate_xyz, threads=self._threads
+        )
 
 
-def _add_errors(scene: dict, relative: float) -> None:
-    """Standard errors of what is proportional to the bow's luminance; that of what lies behind is far smaller."""
-    names = ("peak_luminance_cd_m2", "contrast_median", "contrast_best")
-    scene["standard_error"] = {name: None if scene[name] is None else scene[name] * relative for name in names}
-
-
-def _view(scene, light, estimates, lens, threads):
-    """The sky with, in place of each order's XYZ, its luminance polarised along the arc, whole, and across it."""
-    tables, phases = [], []
-    for estimate in estimates:
-        luminance = estimate.colour[1].mean(axis=0)
-        channels = np.stack([luminance[:, 0], luminance.sum(axis=1), luminance[:, 1]], axis=-1)
-        tables.append(np.ascontiguousarray(channels))
-        phases.append(estimate.mono.mean(axis=0).sum(axis=(0, 1)))
-    plate_xyz = None
-    if scene.sky.model == "plate":
-        from raytrace.frame.rendering import read_plate
-
-        plate_xyz = read_plate(scene, lens).mean(axis=(0, 1), dtype=np.float64)
-    return prepare_view(scene, light, tables, phases, lens.pixel_rad, plate_xyz, threads=threads)
-
-
-def _bow(view, lens, p, theta, centre, threads) -> dict:
-    """What one bow is in the scene."""
-    sun = np.array(view.sky.sun)
-    middle = -sun if centre == "antisolar" else sun
-    radius = math.pi - theta if centre == "antisolar" else theta
-    arc, tangents = _arc(middle, radius)
-    plate = None
-    if view.has_plate:
-        luminance = view.sky.uniform
-        plate = np.full((len(arc), 3), luminance, dtype=np.float32)
-    light = layered_radiance(view, arc, np.ones(len(arc), dtype=bool), lens.pixel_rad, plate, threads=threads)
-    own = light[:, FIRST_ORDER + p]
-    behind = light[..., 1].sum(axis=1) - own[:, 1]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        contrast = own[:, 1] / behind
-    framed = direction_pixels(lens, arc)[2]
-    lit = own[:, 1] > _LIT_SHARE * max(own[:, 1].max(), 1e-12)
-    # what the sky layers leave dark is ground
-    grounded = view.cover.kind > 0 and light[:, 3:5, 1].sum(axis=1) > light[:, [0, 2], 1].sum(axis=1)
-    why = _sections(arc, framed, lit, np.broadcast_to(grounded, framed.shape))
-    seen = why == ""
-    out = {
-        "visible": _intervals(why),
-        "visible_arc_deg": float(seen.sum() * (POSITIONS_DEG[1] - POSITIONS_DEG[0])),
-        "hidden_by": {name: int((why == name).sum()) for name in SECTIONS},
-    }
-    names = ("peak_luminance_cd_m2", "behind_luminance_cd_m2", "contrast_median", "contrast_best")
-    if not seen.any():
-        out |= dict.fromkeys((*names, "exposure_s", "filter_top", "filter_feet"))
-        # an arc that is wholly below the horizon is said to be, also where the frame would not show it either
-        below = arc[:, 2].max() <= 0.0
-        out["verdict"] = f"not seen: {'below the horizon' if below else _main_reason(why)}"
-        return out
-    best = int(np.argmax(np.where(seen, np.nan_to_num(contrast, posinf=1e30), -1.0)))
-    total = own[:, 1] + behind
-    brightest = float(total[seen].max())
-    white = SATURATION_CD_M2 * _F_NUMBER**2 / _ISO
-    figures = (
-        float(own[seen, 1].max()),
-        float(behind[best]),
-        _finite(np.median(contrast[seen])),
-        _finite(contrast[best]),
-    )
-    out |= dict(zip(names, figures, strict=True))
-    out["exposure_s"] = white * _LEVEL / brightest if brightest > 0 else None
-    top, feet = _top_and_feet(seen)
-    for name, at in (("filter_top", top), ("filter_feet", feet)):
-        axis = tangents[at]
-        out[name] = {
-            "position_deg": float(POSITIONS_DEG[at]),
-            "contrast": _finite(_filtered(light, p, arc, tangents, axis, at=at)),
-            "contrast_at_the_other": _finite(
-                _filtered(light, p, arc, tangents, axis, at=feet if name == "filter_top" else top)
-            ),
-        }
-    out["verdict"] = verdict(out["contrast_best"])
+def relative_errors(scene: dict) -> dict[str, float]:
+    """Relative standard error of each figure that has one, by its key; those of a filter as `filter_top.contrast`."""
+    out = {}
+    for name in LIGHT_FIGURES:
+        if scene[name] is not None:
+            out[name] = relative_error(scene[name], scene["standard_error"][name])
+    for name in FILTERS:
+        for key in FILTER_FIGURES:
+            if scene[name] is not None and scene[name][key] is not None:
+                out[f"{name}.{key}"] = relative_error(scene[name][key], scene[name]["standard_error"][key])
     return out
 
 
@@ -141,7 +154,83 @@ def verdict(contrast) -> str:
     return f"not by eye: {contrast:.2g} is below {EYE_CONTRAST:g}"
 
 
-def _arc(middle, radius):
+def _unseen(words, visible, why) -> dict:
+    out = {"visible": visible, "visible_arc_deg": None if why is None else 0.0, "hidden_by": _hidden_by(why)}
+    out |= dict.fromkeys((*LIGHT_FIGURES, "exposure_s", *FILTERS))
+    return out | {"standard_error": dict.fromkeys(LIGHT_FIGURES), "verdict": words}
+
+
+def _seen(drops, lit, rest, p, arc, tangents, why) -> dict:
+    """Figures of a bow that is seen somewhere, with standard errors by the blocks of rays."""
+    seen = why == ""
+    own, behind = _along(drops.mean(axis=0), lit, rest, p)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        contrast = np.where(own > 0, own / behind, 0.0)
+    best = int(np.argmax(np.where(seen, contrast, -1.0)))
+    brightest = int(np.argmax(np.where(seen, own, -1.0)))
+    top, feet = _top_and_feet(seen)
+    pairs = [(tangents[at], place) for at, other in ((top, feet), (feet, top)) for place in (at, other)]
+
+    def figures(at):
+        own, behind = _along(at, lit, rest, p)
+        with np.errstate(divide="ignore"):
+            contrast = own[seen] / behind[seen]
+            filtered = [_filtered(at, lit, rest, p, arc, tangents, axis, at=place) for axis, place in pairs]
+            return np.array([own[brightest], behind[best], np.median(contrast), own[best] / behind[best], *filtered])
+
+    with np.errstate(invalid="ignore"):
+        values, errors = jackknife(figures, drops)
+    # before black a contrast is infinite, which is told as none; anything else must be a number
+    if np.isnan(values).any() or np.isnan(errors[np.isfinite(values)]).any():
+        raise ArithmeticError("a bow's figure in the scene is not a number")
+    plain = [(float(v), float(e)) if math.isfinite(v) else (None, None) for v, e in zip(values, errors, strict=True)]
+    out = {"visible": _intervals(why), "visible_arc_deg": float(seen.sum() * _STEP_DEG), "hidden_by": _hidden_by(why)}
+    out |= {name: value for name, (value, _) in zip(LIGHT_FIGURES, plain, strict=False)}
+    out["standard_error"] = {name: error for name, (_, error) in zip(LIGHT_FIGURES, plain, strict=False)}
+    total = float((own + behind)[seen].max())
+    out["exposure_s"] = SATURATION_CD_M2 * F_NUMBER**2 / ISO * LEVEL / total if total > 0 else None
+    for name, at, first in ((FILTERS[0], top, 4), (FILTERS[1], feet, 6)):
+        some = plain[first : first + 2]
+        out[name] = {"position_deg": float(POSITIONS_DEG[at])}
+        out[name] |= {key: value for key, (value, _) in zip(FILTER_FIGURES, some, strict=True)}
+        out[name]["standard_error"] = {key: error for key, (_, error) in zip(FILTER_FIGURES, some, strict=True)}
+    out["verdict"] = verdict(out["contrast_best"])
+    return out
+
+
+def _along(drops, lit, rest, p):
+    """Luminance of the bow alone and of everything else, at each position.
+
+    Parameters
+    ----------
+    drops : (curtains, paths, 2) array
+        What the drops of each curtain send per unit of sunlit rain.
+    lit : (positions, curtains) array
+        Sunlit rain.
+    rest : (positions,) array
+        Luminance of all but the sunlight that the drops send.
+    """
+    orders = lit @ drops.sum(axis=2)
+    own = orders[:, p]
+    return own, rest + orders.sum(axis=1) - own
+
+
+def _filtered(drops, lit, rest, p, arc, tangents, axis, *, at) -> float:
+    """Contrast at one position behind an ideal linear filter along `axis`.
+
+    The light of every order is polarised along the arc or across it (one sun, so all scattering planes of a direction
+    are one); sky, cloud, ground and skylit rain are taken as unpolarised.
+    """
+    across_view = axis - (axis @ arc[at]) * arc[at]
+    across_view /= np.linalg.norm(across_view)
+    along = float(across_view @ tangents[at]) ** 2
+    polarised = np.tensordot(lit[at], drops, axes=1)
+    orders = polarised[:, 0] * along + polarised[:, 1] * (1.0 - along)
+    behind = 0.5 * rest[at] + orders.sum() - orders[p]
+    return float(orders[p] / behind) if behind > 0 else math.inf
+
+
+def _circle(middle, radius):
     """Directions round a centre at POSITIONS_DEG, and the unit vectors along the arc there."""
     right = np.array([middle[1], -middle[0], 0.0])
     norm = np.linalg.norm(right)
@@ -154,14 +243,20 @@ def _arc(middle, radius):
     return np.ascontiguousarray(math.cos(radius) * middle + math.sin(radius) * out), along
 
 
-def _sections(arc, framed, lit, grounded):
+def _sections(arc, framed, own, grounded, rains):
     """For each position why the bow is not seen there; empty where it is."""
+    lit = own > LIT_SHARE * max(own.max(), 1e-12)
     why = np.full(len(arc), "", dtype=object)
     why[~lit] = "no rain"
-    hidden = ~lit & grounded
-    why[hidden] = np.where(arc[hidden, 2] <= 0.0, "horizon", "ground")
+    if rains:
+        hidden = ~lit & grounded
+        why[hidden] = np.where(arc[hidden, 2] <= 0.0, "horizon", "ground")
     why[~framed] = "edge of the frame"
     return why
+
+
+def _hidden_by(why) -> dict:
+    return {name: 0 if why is None else int((why == name).sum() * _STEP_DEG) for name in SECTIONS}
 
 
 def _intervals(why) -> list[dict]:
@@ -174,18 +269,14 @@ def _intervals(why) -> list[dict]:
         length = int(np.argmin(np.roll(seen, -start)))
         first = float(POSITIONS_DEG[start])
         ends = [str(why[start - 1]), str(why[(start + length) % count])]
-        out.append(
-            {
-                "from_deg": first,
-                "to_deg": first + (length - 1) * float(POSITIONS_DEG[1] - POSITIONS_DEG[0]),
-                "ends": ends,
-            }
-        )
+        out.append({"from_deg": first, "to_deg": first + (length - 1) * _STEP_DEG, "ends": ends})
     return out
 
 
 def _main_reason(why) -> str:
-    names, counts = np.unique(why.astype(str), return_counts=True)
+    """The commonest reason among positions in the frame; the frame itself only where it holds none."""
+    framed = why[why != "edge of the frame"]
+    names, counts = np.unique((framed if framed.size else why).astype(str), return_counts=True)
     return {
         "horizon": "below the horizon",
         "ground": "behind the ground",
@@ -200,74 +291,6 @@ def _top_and_feet(seen):
     return int(np.argmin(np.where(seen, away, 999.0))), int(np.argmax(np.where(seen, away, -1.0)))
 
 
-def _filtered(light, p, arc, tangents, axis, *, at) -> float:
-    """Contrast at one position behind an ideal linear filter along `axis`.
-
-    The light of every order is polarised along the arc or across it (one sun, so all scattering planes of a direction
-    are one); sky, cloud, ground and skylit rain are taken as unpolarised.
-    """
-    across_view = axis - (axis @ arc[at]) * arc[at]
-    across_view /= np.linalg.norm(across_view)
-    along = float(across_view @ tangents[at]) ** 2
-    orders = light[at, FIRST_ORDER:, 0] * along + light[at, FIRST_ORDER:, 2] * (1.0 - along)
-    rest = 0.5 * light[at, :FIRST_ORDER, 1].sum()
-    behind = rest + orders.sum() - orders[p]
-    return float(orders[p] / behind) if behind > 0 else math.inf
-
-
-def _finite(value):
-    return float(value) if math.isfinite(value) else None
-
-
-def scene_lines(rows) -> list[str]:
-    """The scene's part of the report as lines of text."""
-    head = ["bow", "", "peak cd/m2", "behind", "median", "best", "filter top", "filter feet", "seen deg", "verdict"]
-    cells = [head]
-    notes = []
-    for row in rows:
-        scene = row.scene
-        if scene is None:
-            continue
-
-        def number(value, form=".3g"):
-            return "-" if value is None else f"{value:{form}}"
-
-        filters = [scene[name] and scene[name]["contrast"] for name in ("filter_top", "filter_feet")]
-        cells.append(
-            [
-                str(row.order),
-                row.name,
-                number(scene["peak_luminance_cd_m2"]),
-                number(scene["behind_luminance_cd_m2"]),
-                number(scene["contrast_median"]),
-                number(scene["contrast_best"]),
-                *(number(value) for value in filters),
-                f"{scene['visible_arc_deg']:.0f}",
-                scene["verdict"],
-            ]
-        )
-        for part in scene["visible"]:
-            first, last = part["ends"]
-            if first == "closes":
-                notes.append(f"{row.name}: the whole circle")
-            else:
-                notes.append(f"{row.name}: from {part['from_deg']:g} ({first}) to {part['to_deg']:g} deg ({last})")
-        if scene["exposure_s"] is not None and row.order <= 2:
-            seconds = scene["exposure_s"]
-            shutter = f"1/{1 / seconds:.0f}" if seconds < 0.3 else f"{seconds:.2g}"
-            notes.append(
-                f"{row.name}: f/{_F_NUMBER:g}, {shutter} s at ISO {_ISO:g} puts its brightest part at half of white"
-            )
-    widths = [max(len(line[k]) for line in cells) for k in range(len(head))]
-    out = ["In the scene: contrast (L_bow - L_behind) / L_behind along the arc that is seen"]
-    for line in cells:
-        parts = [
-            t.ljust(w) if k in (0, 1, 9) else t.rjust(w) for k, (t, w) in enumerate(zip(line, widths, strict=True))
-        ]
-        out.append(" ".join(parts).rstrip())
-    text = (
-        "Position angles count from the arc's top. Thresholds of contrast: 0.02 usual for the eye in the laboratory, "
-        "0.05 for visibility ranges; colour, cloud texture and practice shift both. Filters: ideal, turned along the "
-        "arc at its top or at its lowest seen part; the sky is taken as unpolarised."
-    )
-    return [*out, *notes, *textwrap.wrap(text, 118)]
+def _all_finite(*arrays) -> None:
+    if not all(np.isfinite(array).all() for array in arrays):
+        raise ArithmeticError("light in the scene is not a number")

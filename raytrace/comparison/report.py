@@ -7,7 +7,6 @@ import dataclasses
 import html
 import io
 import json
-import math
 
 FIGURES = (
     "red_edge_deg",
@@ -29,26 +28,16 @@ CAUTION = (
     "telescope without a filter made for it on the front (ISO 12312-2 covers filters for direct viewing; sunglasses "
     "are none). Local rules and your site's safety instructions come first."
 )
-# Columns of the table: heading in two lines, figure, format
-_COLUMNS = (
-    ("red", "deg", "red_edge_deg", ".2f"),
-    ("violet", "deg", "violet_edge_deg", ".2f"),
-    ("peak", "deg", "peak_deg", ".2f"),
-    ("width", "deg", "colour_width_deg", ".2f"),
-    ("share of", "light", "light_share", ".3e"),
-    ("bow ray", "weight", "bow_ray_weight", ".5f"),
-    ("bow ray", "ratio", "bow_ray_ratio", ".4f"),
-    ("peak", "ratio 550", "peak_ratio_550nm", ".4f"),
-    ("peak", "ratio lum", "peak_ratio_luminance", ".4f"),
-    ("polari-", "sation", "polarisation", ".4f"),
-    ("over own", "glow", "over_own_glow_550nm", ".3g"),
-    ("same,", "filtered", "over_own_glow_550nm_filtered", ".3g"),
-)
+# Columns of the CSV for what a bow is in a scene; empty where there is none
+_SCENE_FIGURES = ("peak_luminance_cd_m2", "behind_luminance_cd_m2", "contrast_median", "contrast_best")
+_FILTERS, _FILTER_FIGURES = ("filter_top", "filter_feet"), ("contrast", "contrast_at_the_other")
+_HIDDEN_BY = ("horizon", "ground", "no rain", "edge of the frame")
 
 
 @dataclasses.dataclass
 class Row:
-    """One bow. Radii are from `centre`; `peak_*` are after the sun's disc; None where the drop makes no such bow.
+    """One bow. Radii are from `centre`; `peak_*` are after the sun's disc; None where the drop makes no such bow, and
+    for all that stands on the peak where it cannot be told from the light that gathers at the sun or opposite it.
 
     Attributes
     ----------
@@ -72,7 +61,7 @@ class Row:
         Degree of linear polarisation of the order's own light at the peak at 550 nm, positive along the arc.
     over_own_glow_550nm, over_own_glow_550nm_filtered : float
         Peak over the light of all other orders of the same drops there, without and with the best linear filter.
-    filter : str
+    filter : str or None
         How the best filter stands: "along the arc" or "across the arc".
     standard_error : dict of str to float
         Of the Monte Carlo figures; the others are exact.
@@ -108,7 +97,7 @@ class Row:
 
     def place_above_horizon(self, sun_elevation_deg: float) -> None:
         """Work out how high the arc's top stands for a sun of that elevation [deg]."""
-        if self.centre is not None:
+        if self.peak_deg is not None:
             centre = -sun_elevation_deg if self.centre == "antisolar" else sun_elevation_deg
             # a circle that reaches over the zenith comes down again on the other side
             top = centre + self.peak_deg
@@ -117,9 +106,9 @@ class Row:
     def as_dict(self) -> dict:
         """The row as JSON has it."""
         out = {"order": self.order, "name": self.name, "centre": self.centre}
-        out |= {name: _plain(getattr(self, name)) for name in FIGURES}
+        out |= {name: getattr(self, name) for name in FIGURES}
         out["best_filter"] = self.filter
-        error = {name: _plain(self.standard_error.get(name, 0.0)) for name in FIGURES}
+        error = {name: self.standard_error.get(name, 0.0) for name in FIGURES}
         out["standard_error"] = error if self.centre is not None else dict.fromkeys(FIGURES)
         out["tolerance_missed"] = list(self.missed)
         if self.top_elevation_deg is not None:
@@ -171,86 +160,38 @@ class Report:
         }
 
     def to_json(self) -> str:
-        """The report as JSON text."""
+        """The report as JSON text.
+
+        Raises
+        ------
+        ValueError
+            If a figure is not a finite number.
+        """
         return json.dumps(self.as_dict(), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
 
     def to_csv(self) -> str:
-        """The report as CSV text: a line a bow, each Monte Carlo figure followed by its standard error."""
+        """The report as CSV text: a line a bow, the same columns whatever was compared, empty where there is nothing.
+
+        Each Monte Carlo figure is followed by its standard error. Lists stand in one cell, parted by semicolons.
+        """
         out = io.StringIO()
         writer = csv.writer(out, lineterminator="\n")
-        scene_keys = [] if self.rows[0].scene is None else [k for k, v in self.rows[0].scene.items() if _is_flat(v)]
-        head = ["order", "name", "centre"]
-        for name in FIGURES:
-            head += [name, f"{name}_standard_error"]
-        writer.writerow([*head, "best_filter", "top_elevation_deg", *scene_keys])
-        for row in self.rows:
-            data = row.as_dict()
-            line = [row.order, row.name, row.centre]
-            for name in FIGURES:
-                line += [data[name], data["standard_error"][name]]
-            line += [row.filter, row.top_elevation_deg, *((row.scene or {}).get(key) for key in scene_keys)]
-            writer.writerow(["" if value is None else value for value in line])
+        lines = [_csv_cells(row.as_dict()) for row in self.rows]
+        writer.writerow([name for name, _ in lines[0]])
+        writer.writerows([["" if value is None else value for _, value in line] for line in lines])
         return out.getvalue()
 
     def to_text(self) -> str:
-        """The report as an aligned table, each row followed by its standard errors."""
-        lines = [*self._heading(), ""]
-        cells = [["bow", "", "round", *(c[0] for c in _COLUMNS)], ["", "", "", *(c[1] for c in _COLUMNS)]]
-        for row in self.rows:
-            if row.centre is None:
-                cells.append([str(row.order), row.name, "none", *("-" for _ in _COLUMNS)])
-                continue
-            round_ = {"antisolar": "antisun", "sun": "sun"}[row.centre]
-            cells.append([str(row.order), row.name, round_, *(_format(getattr(row, c[2]), c[3]) for c in _COLUMNS)])
-            errors = (row.standard_error.get(c[2]) for c in _COLUMNS)
-            cells.append(["", "", "+-", *("" if e is None or e == 0 else f"{e:.1g}" for e in errors)])
-        lines += _aligned(cells, left=3)
-        lines += ["", *self._notes()]
-        return "\n".join(lines)
+        """The report as aligned tables, each row followed by its standard errors."""
+        from raytrace.comparison.text import report_text
 
-    def _heading(self):
-        if "drop" in self.input:
-            drop = self.input["drop"]
-            what = f"one drop of {drop['diameter_mm']:g} mm, water of {drop['temperature_c']:g} degC"
-            if drop["refractive_index"] is not None:
-                what = f"one drop of {drop['diameter_mm']:g} mm, index {drop['refractive_index']:g}"
-            sun = drop["sun_elevation_deg"]
-            light = "sunlight above the air" if sun is None else f"sunlight of a sun {sun:g} deg up"
-            yield f"{what}, black sky, {light}"
-        else:
-            scene = self.input["scene"]
-            yield f"{scene['name']}: sun {scene['sun']['elevation_deg']:.2f} deg up; drops of its first table [rain]"
+        return report_text(self)
 
-    def _notes(self):
-        import textwrap
+    def png(self) -> bytes:
+        """The plot of the report as the bytes of a PNG file."""
+        from raytrace.comparison.plot import plot_png
 
-        text = (
-            f"{self.rays[0] / 1e6:.3g} M rays at 550 nm and {self.rays[1] / 1e6:.3g} M at each other wavelength. "
-            "Lines with +- are standard errors. Edges are those of ray optics at 700 and 400 nm, peaks are after the "
-            "sun's disc. Three ratios are often mixed up: the share of light is that of the whole order, the bow ray's "
-            "weight is Fresnel's for one ray, the peak ratio is of radiance where each bow is brightest."
-        )
-        yield from textwrap.wrap(text, 118)
-        for row in self.rows:
-            if row.missed:
-                limit = " and ".join(f"{n / 1e6:g} M" for n in self.most_rays)
-                yield (
-                    f"{row.name}: {', '.join(row.missed)} did not reach {self.tolerance:.2%} "
-                    f"within the limit of {limit} rays"
-                )
-            if row.top_elevation_deg is not None:
-                where = f"top {row.top_elevation_deg:.1f} deg up"
-                if row.top_elevation_deg <= 0:
-                    where = f"wholly below the horizon by {-row.top_elevation_deg:.1f} deg"
-                yield f"{row.name}: {where}"
-        if self.rows and self.rows[0].scene is not None:
-            from raytrace.comparison.in_scene import scene_lines
-
-            yield ""
-            yield from scene_lines(self.rows)
-        if any(row.centre == "sun" for row in self.rows):
-            yield ""
-            yield from textwrap.wrap("Caution: " + CAUTION, 118)
+        return plot_png(self)
 
     def plot(self, path) -> None:
         """Write the plot of the report as PNG, whole or not at all.
@@ -266,12 +207,14 @@ class Report:
 
     def _repr_html_(self) -> str:
         """A small table for a notebook."""
-        head = "".join(f"<th>{html.escape(f'{a} {b}')}</th>" for a, b, *_ in _COLUMNS)
+        from raytrace.comparison.text import COLUMNS, number
+
+        head = "".join(f"<th>{html.escape(f'{a} {b}')}</th>" for a, b, *_ in COLUMNS)
         body = []
         for row in self.rows:
             cells = []
-            for *_, name, form in _COLUMNS:
-                text, error = _format(getattr(row, name), form), row.standard_error.get(name)
+            for *_, name, form in COLUMNS:
+                text, error = number(getattr(row, name), form), row.standard_error.get(name)
                 cells.append(f"<td>{text}{f' &plusmn; {error:.1g}' if error else ''}</td>")
             body.append(
                 f"<tr><td>{row.order}</td><td>{html.escape(row.name)}</td><td>{row.centre}</td>{''.join(cells)}</tr>"
@@ -280,25 +223,28 @@ class Report:
         return f"<table>{top}{''.join(body)}</table>"
 
 
-def _plain(value):
-    return None if value is None or (isinstance(value, float) and not math.isfinite(value)) else value
+def _csv_cells(row: dict):
+    """Columns of one row of the JSON, name and value, in their order."""
+    cells = [(name, row[name]) for name in ("order", "name", "centre")]
+    cells += _with_error(FIGURES, row, row["standard_error"])
+    cells += [("best_filter", row["best_filter"]), ("tolerance_missed", ";".join(row["tolerance_missed"]))]
+    cells.append(("top_elevation_deg", row.get("top_elevation_deg")))
+    scene = row.get("scene") or {}
+    runs = [f"{r['from_deg']:g} ({r['ends'][0]}) to {r['to_deg']:g} ({r['ends'][1]})" for r in scene.get("visible", [])]
+    cells += [("visible", ";".join(runs)), ("visible_arc_deg", scene.get("visible_arc_deg"))]
+    hidden = scene.get("hidden_by", {})
+    cells += [(f"hidden_by_{name.replace(' ', '_')}_deg", hidden.get(name)) for name in _HIDDEN_BY]
+    cells += _with_error(_SCENE_FIGURES, scene, scene.get("standard_error", {}))
+    cells.append(("exposure_s", scene.get("exposure_s")))
+    for name in _FILTERS:
+        filter_ = scene.get(name) or {}
+        cells.append((f"{name}_position_deg", filter_.get("position_deg")))
+        cells += _with_error(_FILTER_FIGURES, filter_, filter_.get("standard_error", {}), f"{name}_")
+    missed = ";".join(scene.get("tolerance_missed", []))
+    return [*cells, ("scene_tolerance_missed", missed), ("verdict", scene.get("verdict"))]
 
 
-def _is_flat(value) -> bool:
-    return value is None or isinstance(value, (int, float, str))
-
-
-def _format(value, form) -> str:
-    return "-" if value is None or not math.isfinite(value) else f"{value:{form}}"
-
-
-def _aligned(cells, *, left: int) -> list[str]:
-    """Rows of cells as lines; the first `left` columns to the left, numbers to the right."""
-    widths = [max(len(row[k]) for row in cells) for k in range(len(cells[0]))]
-    out = []
-    for row in cells:
-        parts = [
-            text.ljust(w) if k < left else text.rjust(w) for k, (text, w) in enumerate(zip(row, widths, strict=True))
-        ]
-        out.append(" ".join(parts).rstrip())
-    return out
+def _with_error(names, values: dict, errors: dict, prefix: str = ""):
+    for name in names:
+        yield f"{prefix}{name}", values.get(name)
+        yield f"{prefix}{name}_standard_error", errors.get(name)

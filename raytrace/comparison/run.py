@@ -7,8 +7,10 @@ from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 
+from raytrace.comparison import in_scene
+from raytrace.comparison.asked import FIRST_RAYS, MOST_RAYS, check_asked, shown
 from raytrace.comparison.drop import Drop
-from raytrace.comparison.estimate import FIRST_RAYS, MONO_NM, MOST_RAYS, Estimate
+from raytrace.comparison.estimate import MONO_NM, Estimate, needed_bytes
 from raytrace.comparison.figures import (
     COLOUR_FIGURES,
     MONO_FIGURES,
@@ -18,15 +20,18 @@ from raytrace.comparison.figures import (
     edges,
     order_name,
     ray_weight,
+    relative_error,
 )
+from raytrace.comparison.in_scene import Sight
 from raytrace.comparison.report import Report, Row
 from raytrace.drops.sizes import drop_sizes
 from raytrace.drops.water import refractive_index
 from raytrace.errors import InputError
 from raytrace.light.spectrum import before_loading_beside
 from raytrace.optics.scattering import wavelengths_nm
+from raytrace.preflight import preflight
+from raytrace.scene.model import Scene
 
-MOST_ORDERS = 12
 # Orders traced at least, so that the glow of a few bows' drops is whole
 _FEWEST_PATHS = 9
 # Bows of neighbouring wavelengths stand a tenth of the sun's disc apart
@@ -57,11 +62,11 @@ def compare(
     seed : int, optional
         The scene's own, or 0, unless given.
     threads : int, optional
-        All cores unless given; the figures do not depend on it.
+        From 1; all cores unless given; the figures do not depend on it.
     progress : bool
         Show a bar on standard error.
     most_rays : (int, int)
-        Rays at 550 nm, and at each wavelength of the spectrum, at which adding ends.
+        Rays at 550 nm, and at each wavelength of the spectrum, at which adding ends; at least those of the first round.
     name : str
         What problems call the scene.
 
@@ -75,16 +80,19 @@ def compare(
         If an argument is out of range, or the scene cannot be used.
     """
     subject = Drop() if scene_or_drop is None else scene_or_drop
-    _check(orders, tolerance, seed)
+    check_asked(orders=orders, tolerance=tolerance, seed=seed, threads=threads, most_rays=most_rays)
     is_drop = isinstance(subject, Drop)
-    scene = subject.scene() if is_drop else subject
-    if not is_drop:
-        from raytrace.preflight import preflight
-
-        preflight(scene, name=name)
+    if not is_drop and not isinstance(subject, Scene):
+        raise InputError(
+            f"scene_or_drop: {shown(subject)} given, which is neither a scene nor a drop; what works: "
+            "raytrace.load_scene(path), or raytrace.Drop(...)"
+        )
+    scene, name = subject.scene() if is_drop else subject, str(name)
     seed = scene.optics.seed if seed is None else int(seed)
     wavelength = wavelengths_nm(scene.optics.model_copy(update={"wavelength_step_nm": _STEP_NM}))
     paths = max(orders + 2, _FEWEST_PATHS, 0 if is_drop else scene.optics.paths)
+    if not is_drop:
+        preflight(scene, name=name, need=needed_bytes(paths, len(scene.rain)))
     before_loading_beside()
     with ThreadPoolExecutor(1) as pool:
         # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
@@ -92,16 +100,26 @@ def compare(
         estimates = [
             _estimate(scene, c, wavelength, paths, seed, threads) for c in range(1 if is_drop else len(scene.rain))
         ]
-        estimates[0].add_mono(FIRST_RAYS[0])
+        for estimate in estimates:
+            estimate.add_mono(FIRST_RAYS[0])
         light = spectrum.result()
     for estimate in estimates:
         estimate.set_spectrum(light if isinstance(light, np.ndarray) else light.direct_normal)
         estimate.add_colour(FIRST_RAYS[1])
     index = refractive_index(scene.rain[0], scene.air, [VIOLET_NM, MONO_NM, RED_NM]).real
     places = {k: edges(float(index[2]), float(index[0]), float(index[1]), k) for k in range(1, orders + 1)}
-    found = _refine(estimates[0], places, tolerance, most_rays, progress)
+    sight = None if is_drop else Sight(scene, light, threads)
+    found, seen = _refine(estimates, places, tolerance, most_rays, sight, progress)
     rows = [_row(k, places[k], found.get(k), float(index[1]), tolerance) for k in places]
-    report = Report(
+    elevation = subject.sun_elevation_deg if is_drop else light.sun.elevation_deg
+    for row in rows:
+        if row.centre is not None and elevation is not None:
+            row.place_above_horizon(float(elevation))
+        row.scene = seen.get(row.order)
+        if row.scene is not None:
+            errors = in_scene.relative_errors(row.scene)
+            row.scene["tolerance_missed"] = [k for k, error in errors.items() if error > tolerance]
+    return Report(
         rows=rows,
         input=_input(subject, scene, name, orders, tolerance, seed, light),
         rays=tuple(estimates[0].rays),
@@ -110,29 +128,6 @@ def compare(
         most_rays=tuple(most_rays),
         curves=_curves(estimates[0]),
     )
-    if is_drop:
-        if subject.sun_elevation_deg is not None:
-            for row in rows:
-                row.place_above_horizon(float(subject.sun_elevation_deg))
-    else:
-        from raytrace.comparison.in_scene import look
-
-        look(scene, light, estimates, rows, found, threads=threads)
-    return report
-
-
-def _check(orders, tolerance, seed):
-    problems = []
-    if not (isinstance(orders, (int, np.integer)) and 1 <= orders <= MOST_ORDERS):
-        problems.append(
-            f"orders: {orders!r} given, which is out of range; what works: a whole number from 1 to {MOST_ORDERS}"
-        )
-    if not (isinstance(tolerance, (int, float)) and 0 < tolerance <= 0.5):
-        problems.append(f"tolerance: {tolerance!r} given, which is out of range; what works: above 0 to 0.5")
-    if seed is not None and not (isinstance(seed, (int, np.integer)) and 0 <= seed < 2**63):
-        problems.append(f"seed: {seed!r} given, which is out of range; what works: a whole number from 0")
-    if problems:
-        raise InputError(*problems)
 
 
 def _light(scene, wavelength, above_the_air):
@@ -161,49 +156,64 @@ def _estimate(scene, curtain, wavelength, paths, seed, threads):
     )
 
 
-def _refine(estimate, places, tolerance, most_rays, progress) -> dict:
-    """Add rays, twice as many each time, until every figure is known or the limit is reached."""
+def _refine(estimates, places, tolerance, most_rays, sight, progress) -> tuple[dict, dict]:
+    """Add rays, twice as many each time, until every figure is known or the limit is reached.
+
+    Figures of the drops are the first curtain's; those in the scene are of the light of all curtains, which then all
+    get the same rays in colour.
+
+    Returns
+    -------
+    found, seen : dict of int to dict
+        By order: figures as `bow_figures` gives them, and what `Sight.bow` says (empty without a scene).
+    """
     from tqdm import tqdm
 
+    first = estimates[0]
     with tqdm(
         desc="tracing drops", unit=" M rays", disable=not progress, file=sys.stderr, bar_format="{desc}: {postfix}"
     ) as bar:
         while True:
-            found, primary = {}, None
-            for order, place in places.items():
-                if place is None:
-                    continue
-                found[order] = bow_figures(estimate, order, place, primary)
-                if order == 1:
-                    primary = found[order]
+            found, seen = _figures(estimates, places, sight)
             worst = [_worst(found, names) for names in (MONO_FIGURES, COLOUR_FIGURES)]
-            million = (estimate.rays[0] + estimate.rays[1] * estimate.wavelength_nm.size) / 1e6
+            worst[1] = max(
+                [worst[1], *(e for scene in seen.values() for e in in_scene.relative_errors(scene).values())]
+            )
+            million = (first.rays[0] + first.rays[1] * first.wavelength_nm.size) * len(estimates) / 1e6
             bar.set_postfix_str(f"{million:.1f} M rays, largest error {max(worst):.2%} of {tolerance:.2%}")
-            more = [
-                min(estimate.rays[k], most_rays[k] - estimate.rays[k]) if worst[k] > tolerance else 0 for k in range(2)
-            ]
+            more = [min(first.rays[k], most_rays[k] - first.rays[k]) if worst[k] > tolerance else 0 for k in range(2)]
             if max(more) < 1000:
-                return found
+                return found, seen
             if more[0] >= 1000:
-                estimate.add_mono(more[0])
+                first.add_mono(more[0])
             if more[1] >= 1000:
-                estimate.add_colour(more[1])
+                for estimate in estimates:
+                    estimate.add_colour(more[1])
+
+
+def _figures(estimates, places, sight) -> tuple[dict, dict]:
+    found, seen, primary = {}, {}, None
+    for order, place in places.items():
+        if place is None:
+            continue
+        found[order] = bow_figures(estimates[0], order, place, primary)
+        if order == 1:
+            primary = found[order]
+        if sight is not None:
+            seen[order] = sight.bow(estimates, order, place["centre"], found[order]["luminance_bin"])
+    return found, seen
 
 
 def _worst(found, names) -> float:
-    return max((relative_error(f["value"][n], f["error"][n]) for f in found.values() for n in names), default=0.0)
-
-
-def relative_error(value: float, error: float) -> float:
-    """Standard error over the figure; infinite where the figure is zero and its error is not."""
-    return error / abs(value) if value else (np.inf if error else 0.0)
+    pairs = [(f["value"][n], f["error"][n]) for f in found.values() for n in names]
+    return max((relative_error(value, error) for value, error in pairs if value is not None), default=0.0)
 
 
 def _row(order, place, found, index, tolerance) -> Row:
     if place is None:
         return Row(order=order, name=order_name(order), centre=None)
     weight = ray_weight(index, order)
-    ratio = weight / ray_weight(index, 1) if index < 2 else float("nan")
+    ratio = weight / ray_weight(index, 1) if index < 2 else None
     names = MONO_FIGURES + COLOUR_FIGURES
     return Row(
         order=order,
@@ -216,7 +226,11 @@ def _row(order, place, found, index, tolerance) -> Row:
         bow_ray_ratio=ratio,
         filter=found["filter"],
         standard_error=found["error"],
-        missed=[n for n in names if relative_error(found["value"][n], found["error"][n]) > tolerance],
+        missed=[
+            n
+            for n in names
+            if found["value"][n] is not None and relative_error(found["value"][n], found["error"][n]) > tolerance
+        ],
         **found["value"],
     )
 
@@ -238,4 +252,5 @@ def _input(subject, scene, name, orders, tolerance, seed, light) -> dict:
     from raytrace.scene.load import scene_hash
 
     sun = {"elevation_deg": light.sun.elevation_deg, "azimuth_deg": light.sun.azimuth_deg}
-    return {"scene": {"name": name, "sha256": scene_hash(scene), "sun": sun}, **common}
+    named = {"name": name, "sha256": scene_hash(scene), "curtains": len(scene.rain), "sun": sun}
+    return {"scene": named, **common}
