@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import contextlib
 import difflib
+import itertools
 import os
 import sys
 import warnings
@@ -85,7 +86,8 @@ def run(arguments: list[str]) -> int:
         print("raytrace: interrupted; no file was written", file=sys.stderr)
         return INTERRUPTED
     except MemoryError:
-        print("raytrace: out of memory; what works: a smaller --size, fewer optics.bins", file=sys.stderr)
+        works = "fewer --orders, fewer [[rain]]" if "compare" in arguments else "a smaller --size, fewer optics.bins"
+        print(f"raytrace: out of memory; what works: {works}", file=sys.stderr)
         return FAILED
     except Exception as problem:
         if os.environ.get("RAYTRACE_DEBUG", "0") != "0":
@@ -172,85 +174,101 @@ def _render(options) -> int:
     threads = None if options.threads is None else _threads(options.threads)
     output = _output(options.output, options.scene)
     scene = _with_options(load_scene(options.scene), options)
-    plate = scene.plate_path()
-    if plate is not None and output.exists() and output.samefile(plate):
-        raise InputError(f"{quoted(str(output))}: is the plate of the scene; what works: another name")
+    _spare_sources([output], scene)
     from raytrace.preflight import preflight
 
     preflight(scene, name=options.scene)
     from raytrace.frame import render
 
     frame = render(scene, threads=threads, cache=not options.no_cache, progress=sys.stderr.isatty())
-    try:
+    with _writing([output]):
         frame.save(output)
-    except OSError as problem:
-        raise InputError(
-            f"{quoted(str(output), 200)}: cannot be written ({problem.strerror or problem}); what works: another folder"
-        ) from None
     print(f"{quoted(str(output), 200)}: {frame.summary()}")
     return DONE
 
 
 def _compare(options) -> int:
+    from raytrace.comparison.asked import WORKS
     from raytrace.comparison.drop import Drop
 
     threads = None if options.threads is None else _threads(options.threads)
-    asked = {
-        "orders": _number("--orders", options.orders, whole=True),
-        "tolerance": _number("--tolerance", options.tolerance),
-        "seed": _number("--seed", options.seed, whole=True),
-    }
+    whole = {"orders": True, "tolerance": False, "seed": True}
     names = ("diameter_mm", "temperature_c", "refractive_index", "sun_elevation_deg")
-    drop = {name: _number(f"--{name.replace('_', '-')}", getattr(options, name)) for name in names}
-    drop = {name: value for name, value in drop.items() if value is not None}
+    given = {name: getattr(options, name) for name in (*whole, *names)}
+    given = {
+        name: _number(_option(name), text, WORKS[name], whole=whole.get(name, False))
+        for name, text in given.items()
+        if text is not None
+    }
+    asked, drop = ({name: given[name] for name in some if name in given} for some in (whole, names))
     outputs = {kind: getattr(options, kind) for kind in ("json", "csv", "plot") if getattr(options, kind) is not None}
     paths = {kind: _output(given, options.scene, ".png" if kind == "plot" else None) for kind, given in outputs.items()}
-    if len({str(path.absolute()) for path in paths.values()}) < len(paths):
-        raise InputError("--json, --csv and --plot: two of them name one file; what works: a name for each")
+    _spare_each_other(paths)
     if options.scene is not None and drop:
-        given = " and ".join(f"--{name.replace('_', '-')}" for name in drop)
-        raise InputError(f"{given}: given beside a scene, which has its own; what works: one of the two")
-    if options.scene is None:
-        subject = Drop(**drop)
-    else:
-        from raytrace.scene.load import load_scene
+        words = " and ".join(map(_option, drop))
+        raise InputError(f"{words}: given beside a scene, which has its own; what works: one of the two")
+    with _options_named():
+        if options.scene is None:
+            subject = Drop(**drop)
+        else:
+            from raytrace.scene.load import load_scene
 
-        subject = load_scene(options.scene)
-    from raytrace.comparison.run import compare
+            subject = load_scene(options.scene)
+            _spare_sources(paths.values(), subject)
+        from raytrace.comparison.run import compare
 
-    asked = {name: value for name, value in asked.items() if value is not None}
-    report = compare(subject, **asked, threads=threads, progress=sys.stderr.isatty(), name=options.scene or "drop")
-    for kind, path in paths.items():
-        _write(report, kind, path)
+        name = options.scene or "drop"
+        report = compare(subject, **asked, threads=threads, progress=sys.stderr.isatty(), name=name)
+    makers = {"json": lambda: report.to_json().encode(), "csv": lambda: report.to_csv().encode(), "plot": report.png}
+    from raytrace.files import write_together
+
+    files = [(path, makers[kind]()) for kind, path in paths.items()]
+    with _writing(paths.values()):
+        write_together(files)
     print(report.to_text())
     return DONE
 
 
-def _write(report, kind, path) -> None:
-    from raytrace.files import write_atomic
+def _option(name: str) -> str:
+    return f"--{name.replace('_', '-')}"
+
+
+@contextlib.contextmanager
+def _options_named():
+    """Problems of arguments are told by the options that gave them."""
+    from raytrace.comparison.asked import WORKS
 
     try:
-        if kind == "plot":
-            report.plot(path)
-        else:
-            write_atomic(path, (report.to_json() if kind == "json" else report.to_csv()).encode())
+        yield
+    except InputError as problem:
+        lines = []
+        for line in problem.problems:
+            name, colon, rest = line.partition(": ")
+            lines.append(f"{_option(name)}{colon}{rest}" if name in WORKS else line)
+        raise InputError(*lines) from None
+
+
+@contextlib.contextmanager
+def _writing(paths):
+    """A disk that has filled meanwhile, or a folder that has gone, is told as bad input."""
+    try:
+        yield
     except OSError as problem:
+        names = ", ".join(quoted(str(path), 200) for path in paths)
         raise InputError(
-            f"{quoted(str(path), 200)}: cannot be written ({problem.strerror or problem}); what works: another folder"
+            f"{names}: cannot be written ({problem.strerror or problem}); what works: another folder"
         ) from None
 
 
-def _number(option: str, text: str | None, *, whole: bool = False):
+def _number(option: str, text: str, works: str, *, whole: bool = False):
     """An option's number; the range is judged where it is used."""
-    if text is None:
-        return None
     try:
-        if len(text) > 40:
+        # Python also takes digits of other scripts, underscores between them, and blanks
+        if len(text) > 40 or not text.isascii() or "_" in text or text != text.strip():
             raise ValueError
         return int(text) if whole else float(text)
     except ValueError:
-        works = "a whole number" if whole else "a number"
-        raise InputError(f"{option}: {_one_line(text)!r} is no number; what works: {works}") from None
+        raise InputError(f"{option}: {_one_line(text)!r} is no such number; what works: {works}") from None
 
 
 def _check(options) -> int:
@@ -281,24 +299,70 @@ def _info(options) -> int:
 
 def _output(given: str | None, scene: str | None, ending: str | None = ".png") -> Path:
     """Where a result goes, checked before any work is done."""
+    from raytrace.files import is_same_file, regular_target
+
     path = Path(given) if given is not None else Path(Path(scene).stem + ".png")
-    name, folder = quoted(str(path), 200), quoted(str(path.parent), 200)
+    name = quoted(str(path), 200)
     if ending is not None and path.suffix.lower() != ending:
         raise InputError(f"{name}: is no name of a PNG file; what works: a name that ends in .png")
     try:
         if path.is_dir():
             raise InputError(f"{name}: is a folder; what works: the name of a file in it")
-        if not path.parent.is_dir():
+        if path.exists() and not path.is_file():
+            raise InputError(f"{name}: is a device, a pipe or a socket; what works: the name of a file")
+        # a link is kept, and what it leads to is written
+        parent = Path(os.path.realpath(path)).parent if path.is_symlink() else path.parent
+        folder = quoted(str(parent), 200)
+        if not parent.is_dir():
             raise InputError(f"{name}: there is no folder {folder}; what works: a folder that exists")
-        if not os.access(path.parent, os.W_OK):
-            raise InputError(f"{name}: the folder {folder} may not be written; what works: -o in another folder")
-        if scene is not None and path.exists() and Path(scene).exists() and path.samefile(scene):
+        regular_target(path)
+        if not os.access(parent, os.W_OK):
+            raise InputError(f"{name}: the folder {folder} may not be written; what works: another folder")
+        if _is_stream(path):
+            raise InputError(f"{name}: is where our own output goes; what works: another name")
+        if scene is not None and is_same_file(path, scene):
             raise InputError(f"{name}: is the scene file itself; what works: another name")
     except OSError as problem:
         raise InputError(
             f"{name}: cannot be written ({problem.strerror}); what works: a shorter or other name"
         ) from None
     return path
+
+
+def _is_stream(path: Path) -> bool:
+    """Whether a path leads to the file that standard output or standard error is written to."""
+    for number in (1, 2):
+        with contextlib.suppress(OSError):
+            if os.path.samestat(os.fstat(number), os.stat(path)):
+                return True
+    return False
+
+
+def _spare_sources(outputs, scene) -> None:
+    """No result may take the place of what the scene is made from; the scene file itself is `_output`'s to spare."""
+    from raytrace.files import is_same_file
+
+    sources = [(scene.plate_path(), "the plate")]
+    for rain in scene.rain:
+        table = getattr(rain, "size_table", None)
+        if table is not None and scene._folder is not None:
+            sources.append((scene._folder / table, "a size table"))
+    for output in outputs:
+        for path, what in sources:
+            if path is not None and is_same_file(output, path):
+                raise InputError(f"{quoted(str(output), 200)}: is {what} of the scene; what works: another name")
+
+
+def _spare_each_other(paths: dict) -> None:
+    """Two results may not go to one file."""
+    from raytrace.files import is_same_file
+
+    for one, other in itertools.combinations(paths, 2):
+        if is_same_file(paths[one], paths[other]):
+            raise InputError(
+                f"--{one} and --{other}: {quoted(str(paths[one]), 200)} and {quoted(str(paths[other]), 200)} are one "
+                "file; what works: a name for each"
+            )
 
 
 def _with_options(scene, options):
@@ -311,11 +375,11 @@ def _with_options(scene, options):
     data["rain"] = [dict(rain) for rain in data["rain"]]
     if options.size is not None:
         width, cross, height = options.size.lower().partition("x")
-        if not (cross and width.isdecimal() and height.isdecimal() and len(options.size) < 20):
+        if not (cross and _is_digits(width) and _is_digits(height) and len(options.size) < 20):
             raise InputError(f"--size: {_one_line(options.size)!r} is no size; what works: --size 1280x720")
         data["camera"] |= {"width_px": int(width), "height_px": int(height)}
     if options.seed is not None:
-        if not (options.seed.isdecimal() and len(options.seed) < 25):
+        if not (_is_digits(options.seed) and len(options.seed) < 25):
             raise InputError(f"--seed: {_one_line(options.seed)!r} is no seed; what works: a whole number from 0")
         data["optics"] = data.get("optics", {}) | {"seed": int(options.seed)}
     # a problem now is the command line's and not the file's
@@ -327,9 +391,14 @@ def _threads(text: str) -> int:
     from raytrace.cores import core_count
 
     most = core_count()
-    if not (text.isdecimal() and len(text) < 10 and 1 <= int(text) <= most):
+    if not (_is_digits(text) and len(text) < 10 and 1 <= int(text) <= most):
         raise InputError(f"--threads: {_one_line(text)!r} given; what works: 1 to {most}, the cores of this machine")
     return int(text)
+
+
+def _is_digits(text: str) -> bool:
+    # of no other script
+    return text.isascii() and text.isdecimal()
 
 
 def _version() -> str:

@@ -109,7 +109,9 @@ def test_arguments_that_cannot_be(capsys, arguments, line):
     assert told(capsys, *arguments).startswith(line)
 
 
-@pytest.mark.parametrize("size", ["640", "x480", "640x", "640x480x3", "-640x480", "6e2x480", "640.0x480", "9" * 30, ""])
+@pytest.mark.parametrize(
+    "size", ["640", "x480", "640x", "640x480x3", "-640x480", "6e2x480", "640.0x480", "9" * 30, "", "\u0666x8"]
+)
 def test_sizes_that_cannot_be(quick, capsys, size):
     line = told(capsys, "render", str(quick), f"--size={size}")
     assert line == f"--size: {size!r} is no size; what works: --size 1280x720"
@@ -123,11 +125,11 @@ def test_sizes_and_seeds_out_of_range(quick, capsys, tmp_path):
     ):
         line = told(capsys, "render", str(quick), *arguments)
         assert line.startswith(f"{quick} with {' '.join(arguments)}: {start}") and line.endswith(works)
-    for seed in ("-1", "1.5", "one", "", "9" * 40):
+    for seed in ("-1", "1.5", "one", "", "9" * 40, "1_0", "\u0663"):
         assert told(capsys, "render", str(quick), f"--seed={seed}") == (
             f"--seed: {seed!r} is no seed; what works: a whole number from 0"
         )
-    for threads in ("0", "-1", "two", "", str(core_count() + 1), "9" * 5000):
+    for threads in ("0", "-1", "two", "", str(core_count() + 1), "9" * 5000, "\u0661"):
         line = told(capsys, "render", str(quick), f"--threads={threads}")
         assert line.startswith("--threads: ") and line.endswith(f"1 to {core_count()}, the cores of this machine")
     assert os.listdir(tmp_path) == ["a.toml"]
@@ -168,7 +170,35 @@ def test_the_picture_never_takes_the_place_of_what_it_is_made_from(quick, capsys
     sound_plate(tmp_path / "sky.png")
     text = toml(camera=SMALL, sky='model = "plate"\nplate = "sky.png"')
     assert "is the plate of the scene" in told(capsys, "render", str(write(tmp_path, text)), "-o", "sky.png")
+    # by a link, too
+    (tmp_path / "link.png").symlink_to("sky.png")
+    assert "is the plate of the scene" in told(capsys, "render", str(tmp_path / "a.toml"), "-o", "link.png")
     assert scene.read_bytes().startswith(b"[sun]") and (tmp_path / "sky.png").stat().st_size < 1000
+
+
+@pytest.mark.skipif(os.name != "posix", reason="pipes and links of POSIX")
+def test_the_picture_goes_to_a_regular_file(quick, capsys, tmp_path):
+    os.mkfifo(tmp_path / "pipe.png")
+    (tmp_path / "link.png").symlink_to("pipe.png")
+    for name in ("pipe.png", "link.png"):
+        line = told(capsys, "render", str(quick), "-o", name)
+        assert line == f"{name}: is a device, a pipe or a socket; what works: the name of a file"
+    assert (tmp_path / "pipe.png").is_fifo() and (tmp_path / "link.png").is_symlink()
+    (tmp_path / "lost.png").symlink_to("none/a.png")
+    assert f"there is no folder {tmp_path / 'none'}" in told(capsys, "render", str(quick), "-o", "lost.png")
+    # a link to a file, also to one that is not there yet, stays a link
+    (tmp_path / "to.png").symlink_to("b.png")
+    assert cli.run(["render", str(quick), "-o", "to.png", "--no-cache"]) == 0
+    assert (tmp_path / "to.png").is_symlink() and (tmp_path / "b.png").read_bytes().startswith(b"\x89PNG")
+
+
+@pytest.mark.skipif(os.name != "posix", reason="descriptors of POSIX")
+def test_a_result_never_replaces_where_we_print(quick, tmp_path):
+    with open(tmp_path / "out.png", "w") as out:
+        command = [sys.executable, "-m", "raytrace", "render", "a.toml", "-o", "out.png"]
+        environment = os.environ | {"PYTHONPATH": str(SCENES.parent)}
+        done = subprocess.run(command, cwd=tmp_path, env=environment, stdout=out, stderr=subprocess.PIPE, text=True)
+    assert (done.returncode, done.stderr) == (2, "out.png: is where our own output goes; what works: another name\n")
 
 
 def test_nothing_is_written_on_bad_input(tmp_path, capsys, monkeypatch):
