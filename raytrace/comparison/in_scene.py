@@ -10,6 +10,7 @@ from raytrace.camera.develop import SATURATION_CD_M2
 from raytrace.camera.lens import direction_pixels, make_lens
 from raytrace.comparison.estimate import jackknife
 from raytrace.comparison.figures import relative_error
+from raytrace.drops.sizes import drop_sizes
 from raytrace.light.sun import antisolar
 from raytrace.sky.radiance import layered_radiance, prepare_view
 from raytrace.sky.shade import FIRST_ORDER
@@ -45,7 +46,7 @@ class Sight:
     def __init__(self, scene, light, threads=None):
         self._scene, self._light, self._threads = scene, light, threads
         self._lens = make_lens(scene.camera, antisolar(light.sun)[0])
-        self._rains = any(rain.extinction_per_km != 0.0 for rain in scene.rain)
+        self._rains = any(drop_sizes(rain).extinction_per_km > 0.0 for rain in scene.rain)
         self._view = None
         self._arcs = {}
 
