@@ -1,10 +1,10 @@
 """Bows by a uniform Airy approximation: ray optics with the diffraction that its own caustic asks for.
 
 Airy's classical bow holds at the bow ray's angle only. Here the two rays that meet at an angle keep their own
-amplitudes, Fresnel factors and paths, and are joined by Airy's function and its derivative (Chester, Friedman and Ursell
-1957; Berry 1966 and Nussenzveig 1969 for scattering). At the bow ray this is Airy's bow; away from it it becomes the sum
-of the two rays, and on the dark side that of the complex ray that is left there. Light that a surface passes on round
-the drop beyond the grazing ray, and the axial focus, are not in it.
+amplitudes, Fresnel factors and paths, and are joined by Airy's function and its derivative (Chester, Friedman and
+Ursell 1957; Berry 1966 and Nussenzveig 1969 for scattering). At the bow ray this is Airy's bow; away from it it becomes
+the sum of the two rays, and on the dark side that of the complex ray that is left there. Light that the surface leads
+on round the drop beyond the grazing ray, and the foci on the axis, are not in it.
 """
 
 from __future__ import annotations

@@ -339,8 +339,8 @@ def add_pairs(size, starts, bin_of, pairs, out):
         Added to.
     """
     x = size.size_parameter
-    stretch = math.cbrt(x) ** 2
-    before = 0.5 * math.cbrt(x)
+    stretch = x ** (2.0 / 3.0)
+    before = 0.5 * x ** (1.0 / 3.0)
     for section in range(starts.size - 1):
         p = section // 2
         kappa = size.exponent * p
