@@ -324,11 +324,13 @@ def _nodes(edges_deg):
 def _absorbed(fields, kappa):
     """U and V of both polarisations with what the chords absorb: amplitudes times exp(-kappa cos r)."""
     z = fields[:, kernels.Z]
-    root = np.sqrt(np.abs(z))
-    a = kappa * fields[:, kernels.CHORD_ODD] * root
-    even = np.where(z > 0, np.cosh(np.where(z > 0, a, 0)), np.cos(a))
-    odd = np.where(z > 0, np.sinh(np.where(z > 0, a, 0)), np.sin(a)) / root
-    kept = np.exp(-kappa * fields[:, kernels.CHORD])
+    straight = kappa * fields[:, kernels.CHORD_ODD]
+    root = np.sqrt(np.maximum(np.abs(z), 1e-300))
+    a = straight * root
+    # on the bright side cosh and sinh, over exp(a), which the outer ray's shorter chord gives back
+    even = np.where(z > 0, 0.5 * (1 + np.exp(-2 * a)), np.cos(a))
+    odd = np.where(a > 1e-8, np.where(z > 0, -0.5 * np.expm1(-2 * a), np.sin(a)) / root, straight)
+    kept = np.exp(-kappa * fields[:, kernels.CHORD] + np.where(z > 0, a, 0))
     for u, v in ((kernels.U_S, kernels.V_S), (kernels.U_P, kernels.V_P)):
         u, v = fields[:, u], fields[:, v]
         yield kept * (u * even - v * z * odd), kept * (v * even - u * odd)

@@ -35,7 +35,7 @@ _SERIES_TO = 8.0
 _FIRST_ZERO = 2.338
 _AI = np.ascontiguousarray(np.array(airy(np.arange(-_ROOM * _STEPS, _DARKEST * _STEPS + 1) / _STEPS)[:2]).T)
 
-_GAUSS_X, _GAUSS_W = np.polynomial.legendre.leggauss(10)
+_GAUSS_X, _GAUSS_W = np.polynomial.legendre.leggauss(6)
 
 # Interference is shown in full up to the first of these in x |b1 - b2| = 360 deg / period, and not beyond the second
 FADE_FROM, FADE_TO = 360.0 / 0.12, 360.0 / 0.06
@@ -179,12 +179,14 @@ def bright_pairs(n, p, deviation, out):
         if d0 >= d_graze:
             path_2 += d0 - d_graze
         difference = path_2 - path_1
-        if i_2 - i_1 < 0.3 and d0 < d_axis and d0 < d_graze:
+        if i_2 - i_1 < 0.05 and d0 < d_axis and d0 < d_graze:
             difference = path_difference(n, p, d0, i_1, i_2)
         root = (0.75 * difference) ** (1.0 / 3.0)
         scale_1 = math.sqrt(max(b_1 * cos_1 * root / -slope_1, 0.0)) if d0 < d_axis else 0.0
         scale_2 = math.sqrt(max(b_2 * cos_2 * root / slope_2, 0.0)) if d0 < d_graze else 0.0
-        out[j, Z] = root * root
+        # back from where it was moved to: z is straight there, and the path has the slope b
+        moved = deviation[j] - d0
+        out[j, Z] = root * root * (1.0 + moved / (d0 - d_bow))
         out[j, U_S] = a1_s * scale_1 + a2_s * scale_2
         out[j, U_P] = a1_p * scale_1 + a2_p * scale_2
         out[j, V_S] = (a1_s * scale_1 - a2_s * scale_2) / root
@@ -192,7 +194,7 @@ def bright_pairs(n, p, deviation, out):
         out[j, CHORD] = 0.5 * (chord_1 + chord_2)
         out[j, CHORD_ODD] = 0.5 * (chord_1 - chord_2) / root
         out[j, SPAN] = b_2 - b_1
-        out[j, PATH] = 0.5 * (path_1 + path_2)
+        out[j, PATH] = 0.5 * (path_1 + path_2 + moved * (b_1 + b_2))
 
 
 @kernel
@@ -232,7 +234,7 @@ def dark_pairs(n, p, deviation, out):
         _d, slope, b, cos_i, chord = ray(i, n, p)
         path = optical_path(cos_i, chord, n, p)
         difference = 2.0 * path.imag
-        if abs(i.imag) < 0.3:
+        if abs(i.imag) < 0.02:
             difference = path_difference(n, p, d0, i.conjugate(), i).imag
         if not (difference < 0.0 and i.imag > 0.0):
             return j
@@ -243,13 +245,14 @@ def dark_pairs(n, p, deviation, out):
         u = min((math.pi - away) / (math.pi / 6.0), 1.0)
         scale *= u * u * (3.0 - 2.0 * u)
         a_s, a_p = a_s * scale, a_p * scale
-        out[j, Z] = -root * root
+        moved = deviation[j] - d0
+        out[j, Z] = -root * root * (1.0 - moved / away)
         out[j, U_S], out[j, U_P] = 2.0 * a_s.real, 2.0 * a_p.real
         out[j, V_S], out[j, V_P] = -2.0 * a_s.imag / root, -2.0 * a_p.imag / root
         out[j, CHORD] = chord.real
         out[j, CHORD_ODD] = -chord.imag / root
         out[j, SPAN] = 0.0
-        out[j, PATH] = path.real
+        out[j, PATH] = path.real + moved * b.real
     return deviation.size
 
 
@@ -368,13 +371,22 @@ def add_pairs(size, starts, bin_of, pairs, out):
                 slope2 = mean_slope2 + shown * (slope2 - mean_slope2)
             faint = before
             if kappa > 0.0:
+                odd = kappa * pairs[j, CHORD_ODD]
                 root = math.sqrt(abs(z))
-                a = kappa * pairs[j, CHORD_ODD] * root
-                even, odd = (math.cosh(a), math.sinh(a)) if z > 0.0 else (math.cos(a), math.sin(a))
-                odd /= root
+                a = odd * root
+                even = 1.0 + math.copysign(0.5 * a * a, z)
+                depth = -2.0 * kappa * pairs[j, CHORD]
+                if a > 1e-4:
+                    if z > 0.0:
+                        # cosh and sinh over exp(a), which the outer ray's shorter chord gives back
+                        e = math.exp(-2.0 * a)
+                        even, odd = 0.5 * (1.0 + e), 0.5 * (1.0 - e) / root
+                        depth += 2.0 * a
+                    else:
+                        even, odd = math.cos(a), math.sin(a) / root
                 u_s, v_s = u_s * even - v_s * z * odd, v_s * even - u_s * odd
                 u_p, v_p = u_p * even - v_p * z * odd, v_p * even - u_p * odd
-                faint *= math.exp(-2.0 * kappa * pairs[j, CHORD])
+                faint *= math.exp(depth)
             slope2 /= stretch
             k = bin_of[j]
             out[p, 0, k] += faint * (u_s * u_s * ai2 + v_s * v_s * slope2)
