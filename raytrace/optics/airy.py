@@ -91,6 +91,12 @@ def airy_bow(index: complex, size_parameter: float, angle_deg: np.ndarray, order
     C. Chester, B. Friedman and F. Ursell, *Proc. Camb. Phil. Soc.* 53 (1957) 599, eq. 5.1 ff.; H. C. van de Hulst,
     *Light Scattering by Small Particles* (1957), sections 12.21 and 12.22, for a ray's amplitude, path and focal lines.
     On the dark side sin(theta) is not let below 1/x: closer to the axis its light is not focused any more.
+
+    Against the Debye series at n = 1.333, round the main maximum, both polarisations: the primary's power is low by 5 %
+    at x = 100, 0.8 % at 300, 0.1 % at 1000; the secondary's by 30 to 35 %, 9 %, 1.4 %, and 0.2 % at 3000; the third
+    order's by 7 % at 1000 and 0.1 % at 10 000. What is missed is the grazing ray's edge, sharp here and blurred by
+    waves over some x^(-1/3): a bow is sound where its main maximum keeps away from the grazing ray. The nearer n is to
+    1 and the higher the order, the larger must the drop be.
     """
     n, k = _index(index)
     x = _size(size_parameter)
