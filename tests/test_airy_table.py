@@ -14,7 +14,8 @@ EDGES = np.linspace(0.0, 180.0, 9001)
 
 
 def test_shares_of_the_orders():
-    # Share of the intercepted light per Debye order, n = 1.333, recomputed elsewhere; 0.5 % asked, this is 0.1 %.
+    # Share of the intercepted light per Debye order, n = 1.333, recomputed elsewhere; the last ones to 0.3 % of
+    # themselves.
     expected = [0.06641, 0.88370, 0.04060, 0.006119, 0.001723, 0.000670, 0.000314, 0.000167]
     prepared = prepare_airy(N, EDGES, 8)
     for x in (3000.0, 30_000.0):
