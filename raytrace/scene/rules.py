@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+from raytrace.scene.beside import file_beside
 from raytrace.scene.model import WIDEST_PX
 from raytrace.scene.problems import Problem, quoted
 
@@ -159,21 +160,9 @@ def plate_problems(plate: str, folder: Path | None):
     """Whether a plate is a picture file inside the scene's folder, of a size that can be read."""
     key = "sky.plate"
     formats = "a JPEG, PNG or TIFF picture"
-    if folder is None:
-        yield Problem(key, plate, "has no folder to start from", "a scene that is read from a file")
-        return
-    try:
-        path = (folder / plate).resolve()
-        inside = path.is_relative_to(folder.resolve())
-        is_file = path.is_file()
-    except (OSError, ValueError) as problem:
-        yield Problem(key, plate, f"cannot be looked up: {quoted(str(problem))}", formats)
-        return
-    if not inside:
-        yield Problem(key, plate, "lies outside the scene's folder", "a path below the folder of the scene file")
-        return
-    if not is_file:
-        yield Problem(key, plate, "is not a file", f"{formats}, path from the scene file")
+    path = file_beside(key, plate, folder, formats)
+    if isinstance(path, Problem):
+        yield path
         return
     import warnings
 
