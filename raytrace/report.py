@@ -57,13 +57,20 @@ def scene_report(scene, *, name: str) -> str:
 
 def _rain_lines(scene, rain, antisolar_elevation_deg):
     from raytrace.drops.bow_angle import bow_angle
-    from raytrace.drops.sizes import drop_sizes
+    from raytrace.drops.sizes import CLOUD_MM, drop_sizes
     from raytrace.drops.water import refractive_index
+    from raytrace.scene.size_laws import SIZE_LAW_KEYS
 
     sizes = drop_sizes(rain)
     depth = sizes.extinction_per_km * (rain.far_m - rain.near_m) * 1e-3
     yield "extinction", f"{sizes.extinction_per_km:.4g} per km, optical depth {depth:.3g} from near to far"
-    yield "drops", f"{rain.size_law}, mean diameter by cross-section {sizes.effective_diameter_mm:.3g} mm"
+    mean = f"mean diameter by cross-section {sizes.effective_diameter_mm:.3g} mm"
+    if sizes.median_diameter_mm < CLOUD_MM:
+        mean = f"effective radius {500.0 * sizes.effective_diameter_mm:.3g} um"
+    yield "drops", f"{rain.size_law}, {mean}"
+    yield "liquid water", f"{sizes.water_g_m3:.3g} g/m3"
+    if "rain_rate_mm_h" in SIZE_LAW_KEYS[rain.size_law].amounts:
+        yield "rate", f"{sizes.rain_rate_mm_h:.3g} mm/h"
     index = refractive_index(rain, scene.air, [400.0, 550.0, 700.0])
     yield "index", ", ".join(f"{n.real:.5f} at {w} nm" for n, w in zip(index, (400, 550, 700), strict=True))
     for order, bow in ((1, "primary"), (2, "secondary")):

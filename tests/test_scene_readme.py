@@ -6,9 +6,10 @@ import re
 import pytest
 from scene_files import SCENES, write
 
-from raytrace.scene import load, model
+from raytrace.scene import load, model, size_table
 from raytrace.scene.fields import field_range, table_in, works_for
 from raytrace.scene.load import load_scene
+from raytrace.scene.size_laws import SIZE_LAW_KEYS
 
 
 def test_every_scene_of_the_project_is_sound():
@@ -33,7 +34,8 @@ def documented() -> dict[str, dict[str, list[str]]]:
 
 UNIT_OF_ENDING = {
     "deg": "deg", "m": "m", "km": "km", "hpa": "hPa", "c": "°C", "percent": "%", "cm": "cm", "permille": "‰",
-    "h": "mm/h", "mm": "mm", "nm": "nm", "lx": "lx", "m2": "cd/m²", "k": "K", "px": "px", "s": "s",
+    "h": "mm/h", "m3": "g/m³", "um": "µm", "mm": "mm", "nm": "nm", "lx": "lx", "m2": "cd/m²", "k": "K",
+    "px": "px", "s": "s",
 }  # fmt: skip
 
 
@@ -52,7 +54,8 @@ def test_the_readme_holds_every_key_with_range_and_default(table):
         elif works.startswith('"'):
             assert span == works, key
         else:
-            assert (key, span.split(",")[0]) in {("time", "date-time with offset"), ("plate", "path of a picture")}
+            texts = {"time": "date-time with offset", "plate": "path of a picture", "size_table": "path of a text file"}
+            assert span.split(",")[0] == texts[key]
         if field.default is None:
             assert default == "none", key
         elif isinstance(field.default, str):
@@ -76,14 +79,34 @@ def test_the_readmes_own_scene_is_sound(tmp_path):
     load_scene(write(tmp_path, block))
 
 
-def test_the_values_that_stand_in_for_unset_keys_are_those_documented():
+def test_the_values_that_stand_in_for_unset_keys_of_the_rain_are_those_documented():
     from raytrace.drops import sizes
-    from raytrace.sky.background import uniform_luminance_cd_m2
-    from raytrace.sky.rain import azimuth_limits_deg
 
     rows = documented()
     assert f"{sizes.RAIN_RATE_MM_H:g} if neither" in rows["rain"]["rain_rate_mm_h"][-1]
     assert f"; {sizes.SHAPE_MU:g} unless given" in rows["rain"]["shape_mu"][-1]
+    assert f"; {sizes.LIQUID_WATER_G_M3:g} for cloud unless" in rows["rain"]["liquid_water_g_m3"][-1]
+    assert f"; {sizes.EFFECTIVE_RADIUS_UM:g} unless given" in rows["rain"]["effective_radius_um"][-1]
+    assert f"; 1/{1 / sizes.EFFECTIVE_VARIANCE:g} unless given" in rows["rain"]["effective_variance"][-1]
+    text = (SCENES / "README.md").read_text(encoding="utf-8")
+    assert f"cloud has {sizes.LIQUID_WATER_G_M3:g} g/m³, and all else rains {sizes.RAIN_RATE_MM_H:g} mm/h" in text
+    assert f"drops below {sizes.CLOUD_MM:g} mm" in text
+    table = f"at most 1 MiB and {size_table.MOST_ROWS} rows"
+    assert table in text and f"from {size_table.SMALLEST_MM:g}" in text and f"to {size_table.LARGEST_MM:g} mm" in text
+
+
+def test_the_readme_says_which_keys_each_size_law_wants():
+    text = (SCENES / "README.md").read_text(encoding="utf-8")
+    rows = re.findall(r'^  \| `"(\w+)"` \| [^|]+ \| ([^|]*)\| ([^|]*)\|$', text, re.M)
+    told = {law: (tuple(re.findall(r"`(\w+)`", needs)), tuple(re.findall(r"`(\w+)`", may))) for law, needs, may in rows}
+    assert told == {law: (keys.needs, keys.takes) for law, keys in SIZE_LAW_KEYS.items()}
+
+
+def test_the_values_that_stand_in_for_other_unset_keys_are_those_documented():
+    from raytrace.sky.background import uniform_luminance_cd_m2
+    from raytrace.sky.rain import azimuth_limits_deg
+
+    rows = documented()
     assert azimuth_limits_deg(model.Rain(), 100.0) == (15.0, 185.0)
     assert "85 left of the antisolar point" in rows["rain"]["azimuth_from_deg"][-1]
     luminance = uniform_luminance_cd_m2(model.Sky(model="uniform"))

@@ -15,6 +15,7 @@ from raytrace.scene import model as scene_model
 from raytrace.scene.fields import table_in, works_for
 from raytrace.scene.problems import Problem, kind_in_toml, nearest, quoted
 from raytrace.scene.rules import RULES, across_rules
+from raytrace.scene.size_table import read_size_table
 
 LARGEST_BYTES = 1 << 20
 MOST_CURTAINS = 8
@@ -87,7 +88,7 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
                 problems.append(Problem(table, None, "is missing", f"a table [{table}]"))
             continue
         if table == "rain":
-            sound = _curtains(data[table], problems)
+            sound = _curtains(data[table], folder, problems)
         else:
             sound = _table(table, table, kind, data[table], problems)
         if sound is not None:
@@ -112,9 +113,15 @@ def scene_from_dict(data: dict, *, folder: Path | None = None, name: str = "scen
 
 
 def scene_hash(scene: scene_model.Scene) -> str:
-    """SHA-256 of all that a scene says, defaults and the plate's bytes included, however its file is laid out."""
+    """SHA-256 of all that a scene says, however its file is laid out.
+
+    Defaults, the rows of size tables and the plate's bytes are included.
+    """
     text = json.dumps(scene.model_dump(mode="json"), sort_keys=True, ensure_ascii=True, allow_nan=False)
     digest = hashlib.sha256(text.encode())
+    for rain in scene.rain:
+        if rain._measured is not None:
+            digest.update(hashlib.sha256(repr(rain._measured).encode()).digest())
     if scene.plate_path() is not None:
         digest.update(scene.plate_path().read_bytes())
     return digest.hexdigest()
@@ -163,11 +170,11 @@ def _read(path: Path, name: str) -> dict:
         refuse(why, "numbers and dates as in scenes/README.md")
 
 
-def _curtains(data, problems: list[Problem]):
+def _curtains(data, folder: Path | None, problems: list[Problem]):
     """The table [rain], or the tables [[rain]]; None where one of them is not sound."""
     if isinstance(data, dict):
         sound = _table("rain", "rain", scene_model.Rain, data, problems)
-        return None if sound is None else (_settled(sound),)
+        return None if sound is None else (_settled(sound, "rain", folder, problems),)
     if not isinstance(data, list):
         problems.append(Problem("rain", data, f"is {kind_in_toml(data)}", "a table [rain] or tables [[rain]]"))
         return None
@@ -175,18 +182,27 @@ def _curtains(data, problems: list[Problem]):
         problems.append(Problem("rain", data, f"has {len(data)} entries", f"1 to {MOST_CURTAINS} tables [[rain]]"))
         return None
     found = [_table("rain", f"rain[{k}]", scene_model.Rain, item, problems) for k, item in enumerate(data)]
-    return None if None in found else tuple(_settled(rain) for rain in found)
+    found = [rain and _settled(rain, f"rain[{k}]", folder, problems) for k, rain in enumerate(found)]
+    return None if None in found else tuple(found)
 
 
-def _settled(rain: scene_model.Rain) -> scene_model.Rain:
-    """Soft edges that were not asked for shrink to what a small curtain can hold."""
+def _settled(rain: scene_model.Rain, where: str, folder: Path | None, problems: list[Problem]) -> scene_model.Rain:
+    """Soft edges that were not asked for shrink to what a small curtain can hold; measured sizes are read."""
     given = rain.model_fields_set
     changes = {}
     if "edge_m" not in given:
         changes["edge_m"] = min(rain.edge_m, 0.5 * (rain.far_m - rain.near_m))
     if "edge_top_m" not in given:
         changes["edge_top_m"] = min(rain.edge_top_m, 0.5 * (rain.top_m - rain.bottom_m))
-    return rain.model_copy(update=changes)
+    rain = rain.model_copy(update=changes)
+    if rain.size_table is not None:
+        rows = read_size_table(f"{where}.size_table", rain.size_table, folder)
+        if isinstance(rows, Problem):
+            problems.append(rows)
+        else:
+            # kept with the curtain, so that the picture is of what was checked and hashed
+            rain._measured = rows
+    return rain
 
 
 def _table(table: str, where: str, kind: type[BaseModel], data, problems: list[Problem]):

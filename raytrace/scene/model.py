@@ -12,6 +12,8 @@ from typing import Literal
 
 from pydantic import BaseModel, ConfigDict, Field, PrivateAttr
 
+from raytrace.scene.size_laws import SIZE_LAW_KEYS
+
 WIDEST_PX = 32_768
 """Widest and highest picture [px]."""
 
@@ -58,20 +60,34 @@ class Rain(Table):
     refractive_index: float | None = Field(
         None, ge=1.1, le=1.9, description="fixed index relative to air, in place of water's"
     )
-    size_law: Literal["marshall_palmer_1948", "ulbrich_1983", "single"] = Field(
-        "marshall_palmer_1948", description="size distribution of the drops"
+    size_law: Literal[*SIZE_LAW_KEYS] = Field("marshall_palmer_1948", description="size distribution of the drops")
+    rain_rate_mm_h: float | None = Field(
+        None, gt=0, le=300, description="rain rate; 5 where no amount is given and drops are not cloud's [mm/h]"
     )
-    rain_rate_mm_h: float | None = Field(None, gt=0, le=300, description="rain rate; 5 unless given [mm/h]")
-    diameter_mm: float | None = Field(None, ge=0.02, le=8, description="drop diameter, for size_law 'single' [mm]")
+    liquid_water_g_m3: float | None = Field(
+        None, ge=0, le=50, description="liquid water, an amount; 0.1 in cloud where none is given [g/m3]"
+    )
+    extinction_per_km: float | None = Field(None, ge=0, le=1000, description="geometric extinction, an amount [1/km]")
+    diameter_mm: float | None = Field(None, ge=0.002, le=8, description="drop diameter, for size_law 'single' [mm]")
+    relative_spread: float | None = Field(
+        None, ge=0, le=0.3, description="standard deviation over diameter, for size_law 'single'; 0 unless given"
+    )
     median_diameter_mm: float | None = Field(
-        None, ge=0.1, le=6, description="median volume diameter, for size_law 'ulbrich_1983' [mm]"
+        None, ge=0.002, le=6, description="median volume diameter, for size_law 'ulbrich_1983' and 'lognormal' [mm]"
     )
     shape_mu: float | None = Field(
         None, ge=-2, le=20, description="shape parameter, for size_law 'ulbrich_1983'; 2 unless given"
     )
-    extinction_per_km: float | None = Field(
-        None, ge=0, le=50, description="geometric extinction, in place of what the rain rate gives [1/km]"
+    geometric_standard_deviation: float | None = Field(
+        None, ge=1.01, le=3, description="geometric standard deviation, for size_law 'lognormal'"
     )
+    effective_radius_um: float | None = Field(
+        None, ge=1, le=100, description="effective radius, for size_law 'deirmendjian_1969'; 6 unless given [um]"
+    )
+    effective_variance: float | None = Field(
+        None, ge=0.01, le=0.3, description="effective variance, for size_law 'deirmendjian_1969'; 1/9 unless given"
+    )
+    size_table: str | None = Field(None, description="measured sizes for size_law 'table', path from the scene file")
     near_m: float = Field(400.0, ge=0, le=50_000, description="where it begins, level distance; 0 is at the camera [m]")
     far_m: float = Field(2500.0, gt=0, le=100_000, description="where it ends, level distance [m]")
     bottom_m: float = Field(
@@ -91,6 +107,9 @@ class Rain(Table):
         300.0, ge=0, le=10_000, description="soft edge at bottom and top; at most half the height unless given [m]"
     )
     edge_deg: float = Field(12.0, ge=0, le=90, description="width of the soft edge at the azimuth limits [deg]")
+
+    _measured: tuple[tuple[float, ...], tuple[float, ...]] | None = PrivateAttr(None)
+    """Rows of `size_table` as the scene was read: diameters [mm], and drops per volume and diameter [1/(m3 mm)]."""
 
 
 class Optics(Table):

@@ -9,8 +9,11 @@ from __future__ import annotations
 from pathlib import Path
 
 from raytrace.scene.beside import file_beside
-from raytrace.scene.model import WIDEST_PX
+from raytrace.scene.fields import field_range, works_for
+from raytrace.scene.model import WIDEST_PX, Rain
 from raytrace.scene.problems import Problem, quoted
+from raytrace.scene.size_laws import SHAPE_KEYS, SIZE_LAW_KEYS
+from raytrace.scene.size_table import WORKS
 
 PLATE_FORMATS = ("JPEG", "PNG", "TIFF")
 # below the size from which Pillow warns
@@ -63,25 +66,39 @@ def rain_rules(rain, given):
     start, end = rain.azimuth_from_deg, rain.azimuth_to_deg
     if start is not None and end is not None and start == end:
         yield Problem("azimuth_to_deg", end, "equals azimuth_from_deg", "another azimuth; for all round, 360 more")
-    wants = {
-        "single": {"diameter_mm"},
-        "ulbrich_1983": {"median_diameter_mm"},
-        "marshall_palmer_1948": set(),
-    }
-    optional = {"ulbrich_1983": {"shape_mu"}}
-    law = rain.size_law
-    for key in sorted(wants[law] - given):
-        yield Problem(key, None, f'is missing: size_law "{law}" needs it', "a diameter in mm")
-    allowed = wants[law] | optional.get(law, set())
-    for key in sorted({"diameter_mm", "median_diameter_mm", "shape_mu"} & given - allowed):
-        works = [name for name in wants if key in wants[name] | optional.get(name, set())]
-        yield Problem(key, getattr(rain, key), f'means nothing to size_law "{law}"', f'size_law = "{works[0]}"')
-    if rain.extinction_per_km is not None and "rain_rate_mm_h" in given:
-        yield Problem("rain_rate_mm_h", rain.rain_rate_mm_h, "contradicts extinction_per_km", "one of the two")
+    yield from _size_rules(rain, given)
     if "salinity_permille" in given and rain.water == "fresh":
         yield Problem("salinity_permille", rain.salinity_permille, "means nothing to fresh water", 'water = "sea"')
     if rain.refractive_index is not None and "water" in given:
         yield Problem("refractive_index", rain.refractive_index, "contradicts water", "one of the two")
+
+
+def _size_rules(rain, given):
+    """The keys that the size law wants, and one amount of water."""
+    name, law = rain.size_law, SIZE_LAW_KEYS[rain.size_law]
+    for key in sorted(set(law.needs) - given):
+        yield Problem(key, None, f'is missing: size_law "{name}" needs it', _works_for(key))
+    for key in sorted(set(SHAPE_KEYS) & given - {*law.needs, *law.takes}):
+        laws = [f'"{other}"' for other, keys in SIZE_LAW_KEYS.items() if key in keys.needs + keys.takes]
+        works = f"size_law = {' or '.join(laws)}"
+        yield Problem(key, getattr(rain, key), f'means nothing to size_law "{name}"', works)
+    amounts = [key for key in ("extinction_per_km", "liquid_water_g_m3", "rain_rate_mm_h") if key in given]
+    for key in [key for key in amounts if key not in law.amounts]:
+        why = f'means nothing to size_law "{name}", whose drops hang in the air'
+        yield Problem(key, getattr(rain, key), why, " or ".join(law.amounts))
+        amounts.remove(key)
+    if law.rate_shapes and "rain_rate_mm_h" in amounts:
+        amounts.remove("rain_rate_mm_h")
+    for key in amounts[1:]:
+        why = f'contradicts {amounts[0]} with size_law "{name}"'
+        yield Problem(key, getattr(rain, key), why, "one amount of water")
+
+
+def _works_for(key: str) -> str:
+    if key == "size_table":
+        return f"the path of {WORKS}"
+    field = Rain.model_fields[key]
+    return f"a diameter in mm, {field_range(field)}" if key.endswith("_mm") else works_for(field)
 
 
 def sky_rules(sky, given):
