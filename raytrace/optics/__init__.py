@@ -2,10 +2,12 @@
 
 _WHERE = {
     "ScatteringTable": "table",
+    "debye_series": "debye",
+    "lorenz_mie": "debye",
     "scattering_table": "scattering",
     "trace_sphere": "sphere",
 }
-__all__ = ["ScatteringTable", "scattering_table", "trace_sphere"]
+__all__ = ["ScatteringTable", "debye_series", "lorenz_mie", "scattering_table", "trace_sphere"]
 
 
 def __getattr__(name):
