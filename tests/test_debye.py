@@ -12,7 +12,7 @@ from raytrace.optics.partial_waves import term_count
 
 def order_efficiencies(index, x, paths):
     """Scattering efficiency of each order alone."""
-    a, b = partial_waves(order_coefficients(complex(index), x, paths))
+    a, b = partial_waves(order_coefficients(complex(index), x, np.arange(paths)))
     n = np.arange(1, a.shape[-1] + 1)
     return 2 / x**2 * np.sum((2 * n + 1) * (np.abs(a) ** 2 + np.abs(b) ** 2), axis=-1)
 
@@ -165,7 +165,7 @@ def twin(index, x, terms, paths):
 )
 def test_coefficients_against_hankel_functions(index, x):
     terms = term_count(x)
-    found = partial_waves(order_coefficients(complex(index), x, 5))[:, :, :terms]
+    found = partial_waves(order_coefficients(complex(index), x, np.arange(5)))[:, :, :terms]
     np.testing.assert_allclose(found, twin(index, x, terms, 5), atol=3e-10)
 
 
@@ -186,7 +186,7 @@ def geometric_end(a):
 )  # fmt: skip
 def test_the_orders_add_up_to_the_whole_sphere(index, x):
     """½ [1 − R22 − T21 T12 / (1 − R11)] is the Mie coefficient (Debye 1908)."""
-    orders = partial_waves(order_coefficients(complex(index), x, 24))
+    orders = partial_waves(order_coefficients(complex(index), x, np.arange(24)))
     whole = partial_waves(whole_coefficients(complex(index), x))[:, 0]
     np.testing.assert_allclose(orders.sum(axis=1) + geometric_end(orders), whole, atol=1e-10)
 

@@ -146,36 +146,25 @@ def amplitudes(mu, coefficients, out):
 
 
 @kernel
-def add_intensities(mu, coefficients, weight, by_order, whole):
-    """Add weight |S|^2 of each row, and of the sum of the rows before squaring.
+def add_intensities(mu, coefficients, weight, total):
+    """Add weight |S|^2 of each row and polarisation, at all angles.
 
     Parameters
     ----------
     mu : (n_angle,) float64
     coefficients : (groups, rows * 32) float64
     weight : float
-    by_order : (rows, 2, n_angle) float64
+    total : (rows, 2, n_angle) float64
         Added to.
-    whole : (2, n_angle) float64
-        Added to: |sum of S|^2, the interference of the orders included. Of size 0 in the last direction: left out.
     """
-    rows = by_order.shape[0]
+    rows = total.shape[0]
     work, sums = np.empty((19, ANGLES)), np.empty(rows * 4 * ANGLES)
     for start in range(0, mu.size, ANGLES):
         block_sums(mu, start, coefficients, rows, work, sums)
         by_row = sums.reshape((rows, 4, ANGLES))
-        here = min(ANGLES, mu.size - start)
         for r in range(rows):
-            for j in range(here):
+            for j in range(min(ANGLES, mu.size - start)):
                 re_1, im_1 = by_row[r, 0, j] + by_row[r, 2, j], by_row[r, 1, j] + by_row[r, 3, j]
                 re_2, im_2 = by_row[r, 0, j] - by_row[r, 2, j], by_row[r, 1, j] - by_row[r, 3, j]
-                by_order[r, 0, start + j] += weight * (re_1 * re_1 + im_1 * im_1)
-                by_order[r, 1, start + j] += weight * (re_2 * re_2 + im_2 * im_2)
-        if whole.shape[1] > 0:
-            for j in range(here):
-                s_1, s_2 = 0.0 + 0.0j, 0.0 + 0.0j
-                for r in range(rows):
-                    s_1 += complex(by_row[r, 0, j] + by_row[r, 2, j], by_row[r, 1, j] + by_row[r, 3, j])
-                    s_2 += complex(by_row[r, 0, j] - by_row[r, 2, j], by_row[r, 1, j] - by_row[r, 3, j])
-                whole[0, start + j] += weight * (s_1.real * s_1.real + s_1.imag * s_1.imag)
-                whole[1, start + j] += weight * (s_2.real * s_2.real + s_2.imag * s_2.imag)
+                total[r, 0, start + j] += weight * (re_1 * re_1 + im_1 * im_1)
+                total[r, 1, start + j] += weight * (re_2 * re_2 + im_2 * im_2)

@@ -75,7 +75,7 @@ def debye_series(index, size_parameter: float, angle_deg, *, paths: int = 8) -> 
     if not (isinstance(paths, (int, np.integer)) and 1 <= paths <= _MOST_PATHS):
         raise ValueError(f"paths={paths!r} given; whole numbers from 1 to {_MOST_PATHS} work")
     out = np.empty((int(paths), 2, mu.size), dtype=np.complex128)
-    amplitudes(mu, order_coefficients(index, x, int(paths)), out)
+    amplitudes(mu, order_coefficients(index, x, np.arange(int(paths))), out)
     return out
 
 
@@ -134,13 +134,16 @@ def efficiencies(index, size_parameter: float) -> Efficiencies:
     )
 
 
-def order_coefficients(index: complex, size_parameter: float, paths: int) -> np.ndarray:
-    """(groups, paths * 4 * GROUP) coefficients of the Debye orders as the angular sums read them; trusts its caller."""
+def order_coefficients(index: complex, size_parameter: float, row_of: np.ndarray) -> np.ndarray:
+    """(groups, rows * 4 * GROUP) coefficients of the Debye orders as the angular sums read them; trusts its caller.
+
+    `row_of` (paths,) int64 is the row of each order p, or -1 where it is left out.
+    """
     terms = term_count(size_parameter)
     inner = np.empty(terms + 1, dtype=np.complex128)
     inner_log_derivative(index * size_parameter, terms, inner)
-    coefficients = np.zeros((group_count(size_parameter), paths * 4 * GROUP))
-    debye_coefficients(index, size_parameter, terms, paths, inner, coefficients)
+    coefficients = np.zeros((group_count(size_parameter), (int(row_of.max()) + 1) * 4 * GROUP))
+    debye_coefficients(index, size_parameter, terms, row_of, inner, coefficients)
     return coefficients
 
 

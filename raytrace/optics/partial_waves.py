@@ -101,8 +101,8 @@ def surface(alpha, beta, index, out_1, in_1, in_2, turn, shrink, inverse_1, inve
 
 
 @kernel
-def debye_coefficients(index, x, terms, paths, inner, coefficients):
-    """a_n and b_n of each Debye order.
+def debye_coefficients(index, x, terms, row_of, inner, coefficients):
+    """a_n and b_n of some or all Debye orders.
 
     Term p = 0 is (1 - R22)/2: what is diffracted, the 1, and what is reflected. Term p >= 1 is -T21 R11^(p-1) T12 / 2.
 
@@ -112,10 +112,12 @@ def debye_coefficients(index, x, terms, paths, inner, coefficients):
         Relative to the medium, n + ik, k >= 0 absorbs.
     x : float
         Size parameter.
-    terms, paths : int
+    terms : int
+    row_of : (paths,) int64
+        Row of each order p in the coefficients; -1 leaves it out.
     inner : (terms + 1,) complex128
         From `inner_log_derivative` at y = index x.
-    coefficients : (groups, paths * 4 * GROUP) float64
+    coefficients : (groups, rows * 4 * GROUP) float64
         Written, as the angular sums read them; zero on entry.
     """
     y = index * x
@@ -144,10 +146,12 @@ def debye_coefficients(index, x, terms, paths, inner, coefficients):
         turn, inverse_1 = here.conjugate() / here, 1.0 / (here * here)
         r_e, i_e, t_e = surface(1.0 + 0.0j, index, index, out_1, in_1, in_2, turn, shrink, inverse_1, inverse_2)
         r_m, i_m, t_m = surface(index, 1.0 + 0.0j, index, out_1, in_1, in_2, turn, shrink, inverse_1, inverse_2)
-        store(coefficients, n, 0, 0.5 * (1.0 - r_m), 0.5 * (1.0 - r_e))
+        if row_of[0] >= 0:
+            store(coefficients, n, row_of[0], 0.5 * (1.0 - r_m), 0.5 * (1.0 - r_e))
         a, b = -0.5 * t_m, -0.5 * t_e
-        for p in range(1, paths):
-            store(coefficients, n, p, a, b)
+        for p in range(1, row_of.size):
+            if row_of[p] >= 0:
+                store(coefficients, n, row_of[p], a, b)
             a *= i_m
             b *= i_e
 
