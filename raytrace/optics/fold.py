@@ -103,11 +103,13 @@ def apply_weights(values, start, weights, out):
 
     Parameters
     ----------
-    values, out : (bins, rows) float64
+    values : (points, rows) float64
     start : (bins,) int64
     weights : (bins, width) float64
+    out : (bins, rows) float64
+        Written.
     """
-    bins, rows = values.shape
+    bins, rows = out.shape
     for i in range(bins):
         for r in range(rows):
             out[i, r] = 0.0
@@ -203,21 +205,29 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
     if table.wavelength_nm is None:
         raise ValueError("the sun's limb darkening needs wavelengths; trace with wavelength_nm")
     disc = DiscFold(table.angle_edges_deg, diameter_deg, table.wavelength_nm, threads=threads)
-    phase, error = np.empty_like(table.phase_sr), np.empty_like(table.phase_sr)
+    names = ["phase_sr", "standard_error_sr", "aureole_sr", "glory_sr"]
+    folds = {n: (getattr(table, n), np.empty_like(getattr(table, n))) for n in names if getattr(table, n) is not None}
 
     def one_wavelength(w):
-        for values, out, squares in ((table.phase_sr, phase, False), (table.standard_error_sr, error, True)):
-            rows = values[:, :, w].reshape(-1, values.shape[-1]).T
+        for name, (values, out) in folds.items():
+            squares = name == "standard_error_sr"
+            rows = values[..., w, :].reshape(-1, values.shape[-1]).T
             folded = disc.fold(rows**2 if squares else rows, w, squares=squares)
-            out[:, :, w] = folded.T.reshape(values[:, :, w].shape)
+            out[..., w, :] = folded.T.reshape(values[..., w, :].shape)
 
     run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
-    np.sqrt(error, out=error)
-    return dataclasses.replace(table, phase_sr=phase, standard_error_sr=error, disc_diameter_deg=float(diameter_deg))
+    folded = {name: out for name, (_, out) in folds.items()}
+    np.sqrt(folded["standard_error_sr"], out=folded["standard_error_sr"])
+    return dataclasses.replace(table, **folded, disc_diameter_deg=float(diameter_deg))
 
 
 def project_with_sun_disc(
-    table: ScatteringTable, spectral_weights: np.ndarray, diameter_deg: float, *, threads: int | None = None
+    table: ScatteringTable,
+    spectral_weights: np.ndarray,
+    diameter_deg: float,
+    *,
+    aureole: bool = False,
+    threads: int | None = None,
 ) -> np.ndarray:
     """Weighted sums over wavelength and polarisation of the table folded with the sun's disc.
 
@@ -231,20 +241,23 @@ def project_with_sun_disc(
     spectral_weights : (n_wavelength, n_channel) array
     diameter_deg : float
         0 for a point [deg].
+    aureole : bool
+        Whether what is diffracted gets a row, the last one.
 
     Returns
     -------
-    (paths, n_angle, n_channel) float64
+    (rows, n_angle, n_channel) float64
+        Rows as of `ScatteringTable.light_sr`.
     """
-    both = table.phase_sr.sum(axis=1)
+    both = table.light_sr(aureole=aureole).sum(axis=1)
     if diameter_deg == 0:
         return np.ascontiguousarray(np.einsum("pwa,wc->pac", both, spectral_weights, optimize=True))
     profile = limb_darkening(table.wavelength_nm)
     powers = profile.shape[1]
     start, basis = disc_weights(table.angle_edges_deg, diameter_deg, powers, threads=threads)
     mean = profile @ (2.0 / (np.arange(powers) + 2.0))
-    out = np.zeros((table.angle_deg.size, table.paths, spectral_weights.shape[1]))
-    folded = np.empty((table.angle_deg.size, table.paths * spectral_weights.shape[1]))
+    out = np.zeros((table.angle_deg.size, len(both), spectral_weights.shape[1]))
+    folded = np.empty((table.angle_deg.size, len(both) * spectral_weights.shape[1]))
     for power in range(powers):
         weights = spectral_weights * (profile[:, power] / mean)[:, None]
         rows = np.einsum("pwa,wc->apc", both, weights, optimize=True)

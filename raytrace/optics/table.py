@@ -16,8 +16,9 @@ class ScatteringTable:
     phase_sr : (paths, 2, n_wavelength, n_angle) float64
         Power per steradian that leaves in order p and polarisation (0 perpendicular to the scattering plane, 1
         parallel), over the power that the drop's cross-section intercepts; mean over each bin [sr⁻¹].
+        Where waves made it, p = 0 holds what is diffracted beside what is reflected.
     standard_error_sr : same shape
-        Standard error of `phase_sr` from independent blocks of rays [sr⁻¹].
+        Standard error of `phase_sr` from independent blocks of rays; waves and Airy bows have none [sr⁻¹].
     angle_edges_deg : (n_angle + 1,) float64
         Edges of the bins of the scattering angle, 0 forward, 180 back to the sun [deg].
     wavelength_nm : (n_wavelength,) float64 or None
@@ -33,6 +34,15 @@ class ScatteringTable:
     seed : int
     disc_diameter_deg : float
         Diameter of the sun's disc that is folded in; 0 for parallel light [deg].
+    aureole_sr : (2, n_wavelength, n_angle) float64 or None
+        What of p = 0 is diffracted; extinction that counts the geometric cross-section once leaves it where it is. None
+        where rays alone made the table [sr⁻¹].
+    glory_sr : (2, n_wavelength, n_angle) float64 or None
+        Near 180 degrees, where it was asked for, all orders in one with their interference, in their place [sr⁻¹].
+    sizes : int
+        How many sizes were averaged; 0 where rays made the table, for which all are alike but for absorption.
+    size_error : float
+        How far the last doubling of the sizes moved the orders, as a share of each one's largest value after the disc.
     """
 
     phase_sr: np.ndarray
@@ -46,6 +56,10 @@ class ScatteringTable:
     rays: int
     seed: int
     disc_diameter_deg: float = 0.0
+    aureole_sr: np.ndarray | None = None
+    glory_sr: np.ndarray | None = None
+    sizes: int = 0
+    size_error: float = 0.0
 
     @property
     def paths(self) -> int:
@@ -65,6 +79,29 @@ class ScatteringTable:
     def share(self) -> np.ndarray:
         """(paths, 2, n_wavelength) shares of the intercepted light that leave in each order and polarisation."""
         return self.phase_sr @ self.solid_angle_sr
+
+    def light_sr(self, *, aureole: bool = False) -> np.ndarray:
+        """Rows of light that are drawn: the orders, without what is diffracted; the glory; and the aureole.
+
+        Parameters
+        ----------
+        aureole : bool
+            Whether the aureole, light near the sun that is diffracted, gets a row.
+
+        Returns
+        -------
+        (rows, 2, n_wavelength, n_angle) float64
+            paths rows, one more where there is a glory, one more for the aureole [sr⁻¹].
+        """
+        extra = [] if self.glory_sr is None else [self.glory_sr]
+        if aureole:
+            extra.append(np.zeros_like(self.phase_sr[0]) if self.aureole_sr is None else self.aureole_sr)
+        if not extra and self.aureole_sr is None:
+            return self.phase_sr
+        rows = np.concatenate([self.phase_sr, np.stack(extra)] if extra else [self.phase_sr])
+        if self.aureole_sr is not None:
+            rows[0] -= self.aureole_sr
+        return rows
 
     def with_sun_disc(self, diameter_deg: float = 0.533, *, threads: int | None = None) -> ScatteringTable:
         """The table seen with the sun's limb-darkened disc in place of parallel light.

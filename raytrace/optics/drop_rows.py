@@ -1,0 +1,185 @@
+"""What drops of many sizes do with light of one wavelength, order by order, each drop by the method that serves it."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from raytrace.optics.airy import airy_phase_prepared, prepare_airy
+from raytrace.optics.angle_grids import BinMeans, cells, cosines
+from raytrace.optics.angular_sums import add_intensities
+from raytrace.optics.debye import order_coefficients, whole_coefficients
+from raytrace.optics.diffraction import diffracted_sr, reflected_sr
+from raytrace.optics.methods import AIRY, RAYS, WAVES, choose
+from raytrace.optics.size_nodes import SizeNodes
+
+GLORY_FROM_DEG, GLORY_FULL_DEG = 162.0, 166.0
+"""Where the exact sum begins to stand for the orders, and from where it does so alone [deg]."""
+_GLORY_X = 3000.0
+"""Larger drops have glories smaller than 0.1 deg, which the sun's disc hides; their orders are added up."""
+_SMALLEST_X = 0.02
+# closer to the sun than this, grids are too coarse for what large drops diffract
+_NEAR_DEG, _NEAR_X = 3.0, 1500.0
+
+
+class Rows(NamedTuple):
+    """Light of one wavelength after drops, averaged by cross-section; without the orders that rays serve.
+
+    Attributes
+    ----------
+    phase_sr : (paths, 2, bins) float64
+        As in `ScatteringTable`; p = 0 holds what is diffracted, also by drops whose p = 0 rays serve [sr⁻¹].
+    aureole_sr : (2, bins) float64
+        What of p = 0 is diffracted [sr⁻¹].
+    whole_sr : (2, bins) float64
+        All orders with their interference, where the glory was asked for, from GLORY_FROM_DEG on [sr⁻¹].
+    rays_share : (paths,) float64
+        Share of the cross-section whose order p is left to rays.
+    rays_whole_share : (paths,) float64
+        The same, of drops that `whole_sr` lacks.
+    """
+
+    phase_sr: np.ndarray
+    aureole_sr: np.ndarray
+    whole_sr: np.ndarray
+    rays_share: np.ndarray
+    rays_whole_share: np.ndarray
+
+
+class RowMaker:
+    """Makes rows for given bins, orders and method; one for all wavelengths and threads.
+
+    Parameters
+    ----------
+    angle_edges_deg : (bins + 1,) array
+        From 0 to 180 [deg].
+    paths : int
+    method : str
+        "airy", "waves" or "auto".
+    sizes : int
+        How many sizes are averaged in the end.
+    glory : bool
+        Whether `whole_sr` is made.
+    """
+
+    def __init__(self, angle_edges_deg, paths: int, method: str, sizes: int, *, glory: bool = False):
+        self.edges_deg = np.asarray(angle_edges_deg, dtype=np.float64)
+        self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
+        self.paths, self.method, self.sizes, self.glory = paths, method, sizes, glory
+        self._means = BinMeans(self.edges_deg)
+        self._near = self.angle_deg < _NEAR_DEG
+
+    def prepare(self, nodes: SizeNodes, wavelength_nm) -> None:
+        """Make what threads share, before they start."""
+        x = _size_parameter(nodes.diameter_mm[:, None], np.asarray(wavelength_nm))
+        self._means.prepare({cells(value, self.sizes) for value in x.ravel()})
+
+    def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, stop=None) -> Rows:
+        """Rows of one wavelength.
+
+        Parameters
+        ----------
+        index : complex
+            Relative to air.
+        wavelength_nm : float
+            In air [nm].
+        nodes : SizeNodes
+        stop : threading.Event, optional
+            Set by whoever wants no result any more.
+
+        Returns
+        -------
+        Rows
+        """
+        bins = self.angle_deg.size
+        x = _size_parameter(nodes.diameter_mm, wavelength_nm)
+        chosen = choose(self.method, x, self.paths, index.real)
+        out = Rows(
+            np.zeros((self.paths, 2, bins)),
+            np.zeros((2, bins)),
+            np.zeros((2, bins)),
+            nodes.weight @ (chosen == RAYS),
+            (nodes.weight * (x > _GLORY_X)) @ (chosen == RAYS),
+        )
+        self._add_waves(out, index, x, nodes.weight, chosen == WAVES, stop)
+        self._add_airy(out, index, x, nodes.weight, chosen == AIRY, stop)
+        self._add_diffraction(out, index, x, nodes.weight, chosen[:, 0] == WAVES)
+        if self.glory:
+            self._add_whole(out, index, x, nodes.weight, stop)
+        return out
+
+    def _add_waves(self, out, index, x, weight, wanted, stop):
+        """Debye's orders: drops with the same grid and the same orders are added up before they go to the bins."""
+        groups = {}
+        for i in np.flatnonzero(wanted.any(axis=1)):
+            orders = tuple(np.flatnonzero(wanted[i]).tolist())
+            key = cells(x[i], self.sizes), orders, bool(x[i] > _NEAR_X), bool(x[i] > _GLORY_X)
+            groups.setdefault(key, []).append(i)
+        for (count, orders, coarse, large), members in sorted(groups.items()):
+            mu, orders = cosines(count), list(orders)
+            row_of = np.full(self.paths, -1)
+            row_of[orders] = np.arange(len(orders))
+            total = np.zeros((len(orders), 2, count))
+            for i in members:
+                if stop is not None and stop.is_set():
+                    return
+                coefficients = order_coefficients(index, x[i], row_of)
+                add_intensities(mu, coefficients, weight[i] / (2.0 * np.pi * x[i] ** 2), total)
+            added = self._means.of(total)
+            if coarse and orders[0] == 0:
+                added[0][:, self._near] = self._near_the_sun(index, x[members], weight[members])
+            out.phase_sr[orders] += added
+            if large:
+                out.whole_sr[:] += added.sum(axis=0)
+
+    def _add_airy(self, out, index, x, weight, wanted, stop):
+        if not wanted.any():
+            return
+        highest = int(np.flatnonzero(wanted.any(axis=0))[-1])
+        prepared = prepare_airy(index, self.edges_deg, highest + 1)
+        light = np.empty_like(prepared.ray_phase_sr)
+        for i in np.flatnonzero(wanted.any(axis=1)):
+            if stop is not None and stop.is_set():
+                return
+            airy_phase_prepared(prepared, max(x[i], 1.0), index.imag, out=light)
+            orders = np.flatnonzero(wanted[i])
+            light *= weight[i]
+            out.phase_sr[orders] += light[orders]
+            if x[i] > _GLORY_X:
+                out.whole_sr[:] += light[orders].sum(axis=0)
+
+    def _near_the_sun(self, index, x, weight):
+        """(2, near bins) order p = 0 of large drops: rings of their own there, finer than the grid, and reflection."""
+        edges = self.edges_deg[: int(self._near.sum()) + 1]
+        rings = sum(w * diffracted_sr(one, edges) for one, w in zip(x, weight, strict=True))
+        return rings + weight.sum() * reflected_sr(index.real, self.angle_deg[self._near])
+
+    def _add_diffraction(self, out, index, x, weight, waves):
+        """Tell apart what of p = 0 is diffracted, and add it for drops whose p = 0 rays serve."""
+        reflected = weight[waves].sum() * reflected_sr(index.real, self.angle_deg)
+        out.aureole_sr[:] = np.maximum(out.phase_sr[0] - reflected, 0.0)
+        for i in np.flatnonzero(~waves):
+            rings = weight[i] * diffracted_sr(x[i], self.edges_deg)
+            out.phase_sr[0] += rings
+            out.aureole_sr[:] += rings
+
+    def _add_whole(self, out, index, x, weight, stop):
+        """The sum of all orders before squaring, near the antisolar point."""
+        totals = {}
+        for i in np.flatnonzero(x <= _GLORY_X):
+            if stop is not None and stop.is_set():
+                return
+            count = cells(x[i], self.sizes)
+            first = int(GLORY_FROM_DEG / 180.0 * count) - 8
+            total = totals.setdefault(count, np.zeros((1, 2, count)))
+            part = np.zeros((1, 2, count - first))
+            mu = np.ascontiguousarray(cosines(count)[first:])
+            add_intensities(mu, whole_coefficients(index, x[i]), weight[i] / (2.0 * np.pi * x[i] ** 2), part)
+            total[:, :, first:] += part
+        for _, total in sorted(totals.items()):
+            out.whole_sr[:] += self._means.of(total[0])
+
+
+def _size_parameter(diameter_mm, wavelength_nm):
+    return np.maximum(np.pi * diameter_mm * 1e6 / wavelength_nm, _SMALLEST_X)

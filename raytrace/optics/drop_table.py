@@ -1,0 +1,189 @@
+"""Scattering tables of drops of many sizes, each drop by rays, Airy bows or waves."""
+
+from __future__ import annotations
+
+import threading
+
+import numpy as np
+
+from raytrace.jit import run_all
+from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker
+from raytrace.optics.fold import DiscFold
+from raytrace.optics.size_nodes import SizeNodes, refine
+from raytrace.optics.sphere import absorption_exponent, trace_sphere
+from raytrace.optics.table import ScatteringTable
+
+SIZE_TOLERANCE = 0.005
+"""Doubling the sizes ends when it moves no order by more than this share of its largest value after the sun's disc."""
+MOST_SIZES = 2048
+_DISC_DEG = 0.533
+# sizes a task of the search for the nodes
+_CHUNK = 8
+
+
+def drop_table(
+    index,
+    wavelength_nm,
+    spectrum,
+    *,
+    method: str = "auto",
+    paths: int = 8,
+    bins: int = 9_000,
+    rays: int = 4_000_000,
+    seed: int = 0,
+    glory: bool = False,
+    threads: int | None = None,
+    on_done=None,
+) -> ScatteringTable:
+    """Scattering by the mean drop of a size spectrum.
+
+    Parameters
+    ----------
+    index : (n_wavelength,) complex array
+        Relative to air, n + ik.
+    wavelength_nm : (n_wavelength,) array
+        In air, rising [nm].
+    spectrum : SizeSpectrum
+    method : str
+        "airy", "waves" or "auto"; see `methods.choose`. Rays that these leave orders to are traced by `trace_sphere`.
+    paths, bins, rays, seed
+        As for `trace_sphere`.
+    glory : bool
+        Let the exact sum of all orders, with their interference, stand for them near the antisolar point, in a row of
+        its own.
+    threads : int, optional
+        All cores unless given; the result does not depend on it.
+    on_done : callable, optional
+        Called after each wavelength.
+
+    Returns
+    -------
+    ScatteringTable
+        Order p = 0 holds what is diffracted, which is told apart in `aureole_sr`.
+
+    Raises
+    ------
+    ValueError
+        If an argument is out of range.
+    """
+    index = np.atleast_1d(np.asarray(index, dtype=np.complex128))
+    wavelength = np.atleast_1d(np.asarray(wavelength_nm, dtype=np.float64))
+    edges = np.linspace(0.0, 180.0, bins + 1)
+    nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
+    maker = RowMaker(edges, paths, method, nodes.weight.size, glory=glory)
+    maker.prepare(nodes, wavelength)
+    phase, aureole = np.empty((paths, 2, wavelength.size, bins)), np.empty((2, wavelength.size, bins))
+    whole, share = np.empty_like(aureole), np.empty((2, paths, wavelength.size))
+    stop = threading.Event()
+
+    def one_wavelength(w):
+        rows = maker.rows(index[w], wavelength[w], nodes, stop=stop)
+        phase[:, :, w], aureole[:, w], whole[:, w] = rows.phase_sr, rows.aureole_sr, rows.whole_sr
+        share[0, :, w], share[1, :, w] = rows.rays_share, rows.rays_whole_share
+
+    # the largest drops in waves cost most at short wavelengths, which come first
+    run_all(one_wavelength, [(w,) for w in range(wavelength.size)], threads=threads, on_done=on_done, stop=stop)
+    error, traced = np.zeros_like(phase), 0
+    if share[0].any():
+        diameter = spectrum.effective_mm()
+        some = int(np.flatnonzero(share[0].any(axis=1))[-1]) + 1
+        table = trace_sphere(
+            index, paths=some, rays=rays, bins=bins, seed=seed, wavelength_nm=wavelength, diameter_mm=diameter,
+            threads=threads,
+        )  # fmt: skip
+        traced = table.rays
+        phase[:some] += share[0, :some, None, :, None] * table.phase_sr
+        error[:some] = share[0, :some, None, :, None] * table.standard_error_sr
+        whole += np.einsum("pw,pqwa->qwa", share[1, :some], table.phase_sr)
+    left_over, absorbed = balance(index, wavelength, spectrum.effective_mm(), paths)
+    table = ScatteringTable(
+        phase_sr=phase,
+        standard_error_sr=error,
+        angle_edges_deg=edges,
+        wavelength_nm=wavelength,
+        index=index,
+        left_over=left_over,
+        absorbed=absorbed,
+        method=method,
+        rays=traced,
+        seed=int(seed),
+        aureole_sr=aureole,
+        sizes=int(nodes.weight.size),
+        size_error=moved,
+    )
+    return _with_glory(table, whole) if glory else table
+
+
+def balance(index, wavelength_nm, diameter_mm: float, paths: int) -> tuple[np.ndarray, np.ndarray]:
+    """Shares of the intercepted light left over after the last order, and absorbed until then, by ray optics.
+
+    What `trace_sphere` counts, by Gauss's rule over the ring b^2 in place of random rays (Fresnel's formulas; van de
+    Hulst 1957, section 12.21).
+
+    Returns
+    -------
+    left_over, absorbed : (n_wavelength,) float64
+    """
+    from raytrace.drops.bow_angle import fresnel
+
+    node, weight = np.polynomial.legendre.leggauss(200)
+    # b = sin(i): the share of light in a ring is d(b^2)
+    i = 0.25 * np.pi * (node + 1.0)
+    weight = 0.25 * np.pi * weight * np.sin(2.0 * i)
+    left_over, absorbed = np.empty((2, len(index)))
+    for w, n in enumerate(index):
+        reflected = np.stack(fresnel(np.cos(i), n.real))
+        cos_r = np.sqrt(1.0 - (np.sin(i) / n.real) ** 2)
+        kept = np.exp(-absorption_exponent(n, wavelength_nm[w], diameter_mm) * cos_r)
+        on = reflected * kept
+        left = (1.0 - reflected) * on ** (paths - 1)
+        taken = (1.0 - reflected) * (1.0 - kept) * (1.0 - on ** (paths - 1)) / (1.0 - on)
+        left_over[w], absorbed[w] = (0.5 * np.sum((value) * weight) for value in (left, taken))
+    return left_over, absorbed
+
+
+def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
+    """Sizes that are fine enough at the first, the middle and the last wavelength."""
+    probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
+    disc = DiscFold(edges, _DISC_DEG, wavelength[probes], threads=threads)
+
+    def average(nodes):
+        # averages of few sizes are made on the grids of many, so that all rules see the same
+        maker = RowMaker(edges, paths, method, 1 << 20)
+        maker.prepare(nodes, wavelength[probes])
+        pieces = range(0, nodes.weight.size, _CHUNK)
+        found = {}
+
+        def one(w, first):
+            some = SizeNodes(*(part[first : first + _CHUNK] for part in nodes))
+            rows = maker.rows(index[w], wavelength[w], some)
+            seen = rows.phase_sr.sum(axis=1)
+            seen[0] -= rows.aureole_sr.sum(axis=0)
+            # light that rays bring is the same for all sizes
+            found[w, first] = seen
+
+        run_all(one, [(w, first) for w in probes for first in pieces], threads=threads)
+        sums = (sum(found[w, first] for first in pieces) for w in probes)
+        return np.stack([disc.fold(np.ascontiguousarray(one.T), k).T for k, one in enumerate(sums)])
+
+    def distance(coarse, fine):
+        peak = fine.max(axis=-1, keepdims=True)
+        return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0))
+
+    return refine(spectrum, average, distance, tolerance=SIZE_TOLERANCE, most_steps=MOST_SIZES)
+
+
+def _with_glory(table: ScatteringTable, whole) -> ScatteringTable:
+    """Near the antisolar point the exact sum in place of the orders, with a soft edge between them."""
+    import dataclasses
+
+    u = np.clip((table.angle_deg - GLORY_FROM_DEG) / (GLORY_FULL_DEG - GLORY_FROM_DEG), 0.0, 1.0)
+    there = u * u * (3.0 - 2.0 * u)
+    orders = table.phase_sr * (1.0 - there)
+    return dataclasses.replace(
+        table,
+        phase_sr=orders,
+        standard_error_sr=table.standard_error_sr * (1.0 - there),
+        aureole_sr=table.aureole_sr * (1.0 - there),
+        glory_sr=whole * there,
+    )
