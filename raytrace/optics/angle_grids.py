@@ -14,7 +14,7 @@ import numpy as np
 from raytrace.optics.fold import apply_weights
 
 _COARSEST, _LEVELS = 1125, 6
-_MANY_SIZES = 24
+MANY_SIZES = 24
 _A_FRINGE = 6
 """Points a fringe where a size stands alone."""
 
@@ -36,7 +36,7 @@ def cells(size_parameter: float, sizes: int) -> int:
     int
         1125 (0.16 deg) or a power of two times it, up to 36,000 (0.005 deg).
     """
-    if sizes >= _MANY_SIZES:
+    if sizes >= MANY_SIZES:
         return _COARSEST if size_parameter < 300 else 2 * _COARSEST
     level = math.ceil(math.log2(max(size_parameter * _A_FRINGE / _COARSEST, 1.0)))
     return _COARSEST * 2 ** min(level, _LEVELS - 1)

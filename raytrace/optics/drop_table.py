@@ -7,6 +7,8 @@ import threading
 import numpy as np
 
 from raytrace.jit import run_all
+from raytrace.optics.airy import prepare_airy
+from raytrace.optics.angle_grids import MANY_SIZES
 from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker
 from raytrace.optics.fold import DiscFold
 from raytrace.optics.size_nodes import SizeNodes, refine
@@ -146,27 +148,39 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
     """Sizes that are fine enough at the first, the middle and the last wavelength."""
     probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
     disc = DiscFold(edges, _DISC_DEG, wavelength[probes], threads=threads)
+    # averages of few sizes are made on the grids of many, so that all rules see the same
+    maker = RowMaker(edges, paths, method, MANY_SIZES)
+    # what rays bring is the same for all sizes; they serve at most p = 0 and 1, whose rays are known in closed form
+    traced = [prepare_airy(index[w], edges, min(paths, 2)).ray_phase_sr.sum(axis=1) for w in probes]
 
     def average(nodes):
-        # averages of few sizes are made on the grids of many, so that all rules see the same
-        maker = RowMaker(edges, paths, method, 1 << 20)
         maker.prepare(nodes, wavelength[probes])
         pieces = range(0, nodes.weight.size, _CHUNK)
         found = {}
 
         def one(w, first):
             some = SizeNodes(*(part[first : first + _CHUNK] for part in nodes))
-            rows = maker.rows(index[w], wavelength[w], some)
-            seen = rows.phase_sr.sum(axis=1)
-            seen[0] -= rows.aureole_sr.sum(axis=0)
-            # light that rays bring is the same for all sizes
-            found[w, first] = seen
+            found[w, first] = maker.rows(index[w], wavelength[w], some)
 
         run_all(one, [(w, first) for w in probes for first in pieces], threads=threads)
-        sums = (sum(found[w, first] for first in pieces) for w in probes)
-        return np.stack([disc.fold(np.ascontiguousarray(one.T), k).T for k, one in enumerate(sums)])
+        out = np.zeros((len(probes), paths, edges.size - 1))
+        for k, w in enumerate(probes):
+            for first in pieces:
+                rows = found[w, first]
+                out[k] += rows.phase_sr.sum(axis=1)
+                out[k, : len(traced[k])] += rows.rays_share[: len(traced[k]), None] * traced[k]
+        return out
+
+    def seen(rows):
+        """After the disc, without what is diffracted."""
+        folded = []
+        for k, light in enumerate(rows):
+            light = np.concatenate([np.minimum(light[:1], traced[k][0]), light[1:]])
+            folded.append(disc.fold(np.ascontiguousarray(light.T), k).T)
+        return np.stack(folded)
 
     def distance(coarse, fine):
+        coarse, fine = seen(coarse), seen(fine)
         peak = fine.max(axis=-1, keepdims=True)
         return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0))
 
