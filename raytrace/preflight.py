@@ -102,4 +102,4 @@ def _plate_bytes(scene) -> float:
 
 def _per_pixel(scene, layers: bool) -> float:
     each = BYTES_PER_PIXEL + (12 if scene.sky.model == "plate" else 0)
-    return each + (BYTES_PER_LAYER_PIXEL * (scene.optics.paths + 6) if layers else 0)
+    return each + (BYTES_PER_LAYER_PIXEL * (scene.optics.paths + 8) if layers else 0)

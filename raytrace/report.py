@@ -41,7 +41,11 @@ def scene_report(scene, *, name: str) -> str:
     for number, (rain, kept) in enumerate(zip(scene.rain, is_cached(scene), strict=True)):
         title = "rain" if len(scene.rain) == 1 else f"rain[{number}]"
         lines += [(f"{title} {key}", value) for key, value in _rain_lines(scene, rain, elevation)]
-        lines.append((f"{title} table", "in the cache" if kept else "not traced yet"))
+        lines += [(f"{title} {key}", value) for key, value in _method_lines(scene, rain)]
+        lines.append((f"{title} table", "in the cache" if kept else "not made yet"))
+    apart = [name for name in ("glory", "aureole") if getattr(optics, name)]
+    if apart:
+        lines.append(("drawn apart", " and ".join(apart)))
     lines += [
         ("orders", f"p = 0 to {optics.paths - 1}: bows 1 to {optics.paths - 2}"),
         ("rays", f"{optics.rays:,} a wavelength, {wavelength.size} wavelengths, seed {optics.seed}"),
@@ -79,6 +83,48 @@ def _rain_lines(scene, rain, antisolar_elevation_deg):
             top = antisolar_elevation_deg + radius[0]
             where = f"top {top:.1f} deg up" if top > 0 else "below the horizon"
             yield bow, f"radius {radius[0]:.2f} deg red, {radius[1]:.2f} green, {radius[2]:.2f} violet; {where}"
+
+
+def _method_lines(scene, rain):
+    """Which sizes of drops use which method, by order, at 550 nm."""
+    import math
+
+    from raytrace.drops.sizes import size_spectrum
+    from raytrace.drops.water import refractive_index
+    from raytrace.optics.methods import choose, switch_over
+    from raytrace.optics.size_nodes import SizeAxis
+
+    optics, nm = scene.optics, 550.0
+    yield (
+        "method",
+        {
+            "rays": "rays for drops of all sizes, no waves",
+            "airy": "rays, joined to Airy bows, for drops of all sizes",
+            "waves": "exact waves for drops of all sizes",
+            "auto": f"each order by the cheapest method that is good to 1 %, at {nm:g} nm:",
+        }[optics.method],
+    )
+    if optics.method != "auto":
+        return
+    index = float(refractive_index(rain, scene.air, [nm])[0].real)
+    spectrum = size_spectrum(rain)
+    rays_from, airy_from = switch_over(optics.paths, index)
+    if spectrum.low_mm == spectrum.high_mm:
+        x = math.pi * spectrum.low_mm * 1e6 / nm
+        names = ("rays", "Airy bow", "waves")
+        chosen = choose("auto", x, optics.paths, index)[0]
+        yield "sizes", ", ".join(f"p = {p} {names[m]}" for p, m in enumerate(chosen))
+        return
+    diameter, weight = (part.ravel() for part in SizeAxis(spectrum).nodes(512))
+    for p in range(optics.paths):
+        start = min(rays_from[p], airy_from[p])
+        limit = start * nm * 1e-6 / math.pi
+        share = weight[diameter < limit].sum()
+        then = "rays" if rays_from[p] <= airy_from[p] else "Airy bows"
+        text = "waves for all sizes"
+        if share < 0.9995:
+            text = f"waves to {limit:.3g} mm ({100 * share:.3g} % of the cross-section), {then} above"
+        yield f"p = {p}", text
 
 
 def _sky_line(sky) -> str:

@@ -9,7 +9,7 @@ from raytrace.light.sun import direction
 from raytrace.scene.model import Air, Camera, Ground, Optics, Rain, Scene, Sky, Sun
 
 # Light enough for a test: 21 wavelengths, 0.1 deg bins, stratified rays
-FAST_OPTICS = {"rays": 20_000, "bins": 1_800, "wavelength_step_nm": 20.0}
+FAST_OPTICS = {"method": "rays", "rays": 20_000, "bins": 1_800, "wavelength_step_nm": 20.0}
 # Edges of no width
 HARD = {"edge_m": 0.0, "edge_top_m": 0.0, "edge_deg": 0.0}
 

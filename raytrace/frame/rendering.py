@@ -67,14 +67,22 @@ def render(
             table = scattering_table(scene, curtain, threads=threads, use_cache=cache, progress=progress)
         rays += table.rays * wavelength.size
         phases.append(_mean_phase(table, light))
-        tables.append(order_xyz(table, light.direct_normal, scene.sun.disc_diameter_deg, threads=threads))
+        tables.append(
+            order_xyz(
+                table,
+                light.direct_normal,
+                scene.sun.disc_diameter_deg,
+                aureole=scene.optics.aureole,
+                threads=threads,
+            )
+        )
     lens = make_lens(scene.camera, antisolar(light.sun)[0])
     plate = read_plate(scene, lens) if scene.sky.model == "plate" else None
     plate_mean = None if plate is None else plate.mean(axis=(0, 1), dtype=np.float64)
     view = prepare_view(
         scene, light, tables, phases, lens.pixel_rad, plate_mean, span=azimuth_span(lens), threads=threads
     )
-    xyz, inside, kept = _radiance(view, lens, plate, scene.optics.paths, layers, threads, progress)
+    xyz, inside, kept = _radiance(view, lens, plate, layer_names(scene.optics), layers, threads, progress)
     exposure = _exposure(scene.camera, xyz, inside)
     sun_xyz = light.direct_normal @ colour.xyz_weights(wavelength)
     matrix = develop.xyz_to_display(scene.camera.white_balance, sun_xyz) / exposure.white_cd_m2
@@ -107,17 +115,16 @@ def _mean_phase(table, light) -> np.ndarray:
     weight = light.diffuse_horizontal * colour.xyz_weights(table.wavelength_nm)[:, 1]
     if weight.sum() <= 0:
         weight = np.ones_like(weight)
-    return np.tensordot(weight / weight.sum(), table.phase_sr.sum(axis=(0, 1)), axes=1)
+    return np.tensordot(weight / weight.sum(), table.light_sr().sum(axis=0), axes=1)
 
 
-def _radiance(view, lens, plate, paths, layers, threads, progress):
+def _radiance(view, lens, plate, names, layers, threads, progress):
     """XYZ of all pixels (n, 3) float32, which of them the lens images, and the layers where asked for."""
     from tqdm import tqdm
 
     width, height = lens.width_px, lens.height_px
     xyz = np.empty((width * height, 3), dtype=np.float32)
     inside = np.empty(width * height, dtype=bool)
-    names = layer_names(paths)
     kept = {name: np.empty((height, width, 3), dtype=np.float32) for name in names} if layers else None
     rows = max(1, _STRIP_PIXELS // width)
     with tqdm(total=height, desc="lighting pixels", unit="row", disable=not progress, file=sys.stderr) as bar:

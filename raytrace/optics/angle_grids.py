@@ -14,6 +14,8 @@ import numpy as np
 from raytrace.optics.fold import apply_weights
 
 _COARSEST, _LEVELS = 1125, 6
+# for many sizes: cells up to the size parameters given
+_AMONG_MANY = ((300.0, 1125), (5000.0, 2250), (np.inf, 1500))
 MANY_SIZES = 24
 _A_FRINGE = 6
 """Points a fringe where a size stands alone."""
@@ -23,7 +25,8 @@ def cells(size_parameter: float, sizes: int) -> int:
     """Number of cells of the grid for a drop.
 
     Among many sizes the fine fringes cancel out and may be met at any point; what is left is as wide as the bow itself,
-    h^(1/3) x^(-2/3) for the main maximum (Airy 1838), at least a fifth of a degree up to x = 60,000.
+    1.02 h^(1/3) x^(-2/3) for the main maximum (Airy 1838): 0.6 deg for the primary at x = 2000, and for the orders that
+    `auto` leaves to waves in larger drops, the tertiary and beyond, 0.3 deg at 20,000.
 
     Parameters
     ----------
@@ -34,10 +37,10 @@ def cells(size_parameter: float, sizes: int) -> int:
     Returns
     -------
     int
-        1125 (0.16 deg) or a power of two times it, up to 36,000 (0.005 deg).
+        1125 (0.16 deg) or a power of two times it, up to 36,000 (0.005 deg); 1500 for the large among many.
     """
     if sizes >= MANY_SIZES:
-        return _COARSEST if size_parameter < 300 else 2 * _COARSEST
+        return next(count for most, count in _AMONG_MANY if size_parameter <= most)
     level = math.ceil(math.log2(max(size_parameter * _A_FRINGE / _COARSEST, 1.0)))
     return _COARSEST * 2 ** min(level, _LEVELS - 1)
 

@@ -146,14 +146,14 @@ def amplitudes(mu, coefficients, out):
 
 
 @kernel
-def add_intensities(mu, coefficients, weight, total):
-    """Add weight |S|^2 of each row and polarisation, at all angles.
+def add_intensities(mu, coefficients, total):
+    """Add |S|^2 of each row and polarisation, at all angles.
 
     Parameters
     ----------
     mu : (n_angle,) float64
     coefficients : (groups, rows * 32) float64
-    weight : float
+        Scaled by the root of what |S|^2 is to be weighted with.
     total : (rows, 2, n_angle) float64
         Added to.
     """
@@ -166,5 +166,5 @@ def add_intensities(mu, coefficients, weight, total):
             for j in range(min(ANGLES, mu.size - start)):
                 re_1, im_1 = by_row[r, 0, j] + by_row[r, 2, j], by_row[r, 1, j] + by_row[r, 3, j]
                 re_2, im_2 = by_row[r, 0, j] - by_row[r, 2, j], by_row[r, 1, j] - by_row[r, 3, j]
-                total[r, 0, start + j] += weight * (re_1 * re_1 + im_1 * im_1)
-                total[r, 1, start + j] += weight * (re_2 * re_2 + im_2 * im_2)
+                total[r, 0, start + j] += re_1 * re_1 + im_1 * im_1
+                total[r, 1, start + j] += re_2 * re_2 + im_2 * im_2

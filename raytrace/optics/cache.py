@@ -21,7 +21,7 @@ from raytrace.files import write_atomic
 from raytrace.jit import cache_root
 from raytrace.optics.table import ScatteringTable
 
-FORMAT = "raytrace scattering table 2"
+FORMAT = "raytrace scattering table 3"
 SUFFIX = ".table"
 LIMIT_BYTES = 2 * 1024**3
 _ARRAYS = (
@@ -33,8 +33,14 @@ _ARRAYS = (
     "index_k",
     "left_over",
     "absorbed",
+    "aureole_sr",
+    "glory_sr",
 )
-_SOURCES = ("sphere.py", "sphere_kernels.py", "table.py", "../random_stream.py")
+_MAY_LACK = ("wavelength_nm", "aureole_sr", "glory_sr")
+_PLAIN = ("method", "rays", "seed", "sizes", "size_error")
+# what these say changes no table
+_NO_SOURCES = ("__init__.py", "cache.py", "scattering.py")
+_MORE_SOURCES = ("../random_stream.py", "../drops/bow_angle.py", "../drops/spectrum.py", "../data/optics_methods.csv")
 
 
 def table_cache_folder() -> Path | None:
@@ -55,11 +61,12 @@ def table_cache_size() -> tuple[int, int]:
 
 
 def table_key(**determines) -> str:
-    """Hash of everything that determines a table: the arguments, and the sources of the tracer."""
+    """Hash of everything that determines a table: the arguments, and the sources of the optics."""
     digest = hashlib.sha256(FORMAT.encode())
     here = Path(__file__).parent
-    for name in _SOURCES:
-        digest.update((here / name).read_bytes())
+    own = sorted(path for path in here.glob("*.py") if path.name not in _NO_SOURCES)
+    for path in [*own, *(here / name for name in _MORE_SOURCES)]:
+        digest.update(path.read_bytes())
     for name in sorted(determines):
         value = determines[name]
         digest.update(f"|{name}=".encode())
@@ -83,7 +90,7 @@ def load(key: str) -> ScatteringTable | None:
             head = json.loads(file.readline(65_536))
             if head["format"] != FORMAT or head["key"] != key:
                 raise ValueError("it belongs to something else")
-            shapes = {name: tuple(head["shapes"][name]) for name in _ARRAYS}
+            shapes = {name: tuple(head["shapes"][name]) for name in _ARRAYS if name in head["shapes"]}
             count = {name: int(np.prod(shape)) for name, shape in shapes.items()}
             if sum(count.values()) * 8 != _size(path) - file.tell():
                 raise ValueError("it is cut short")
@@ -91,16 +98,17 @@ def load(key: str) -> ScatteringTable | None:
         if _digest(head, [data]) != head["sha256"]:
             raise ValueError("its checksum does not hold")
         arrays, at = {}, 0
-        for name in _ARRAYS:
-            arrays[name] = data[at : at + count[name]].reshape(shapes[name])
+        for name, shape in shapes.items():
+            arrays[name] = data[at : at + count[name]].reshape(shape)
             at += count[name]
         with contextlib.suppress(OSError):  # a cache that can be read but not written is good to read
             os.utime(path)  # last use, for the bound on size
         index = arrays.pop("index_n") + 1j * arrays.pop("index_k")
-        return ScatteringTable(**arrays, index=index, method=head["method"], rays=head["rays"], seed=head["seed"])
+        arrays = dict.fromkeys(_MAY_LACK) | arrays
+        return ScatteringTable(**arrays, index=index, **{name: head[name] for name in _PLAIN})
     except (OSError, ValueError, KeyError, TypeError, MemoryError, RecursionError) as problem:
         warnings.warn(
-            f"cache file {path.name} is left unused: {problem}; the table is traced anew", CacheWarning, stacklevel=2
+            f"cache file {path.name} is left unused: {problem}; the table is made anew", CacheWarning, stacklevel=2
         )
         return None
 
@@ -112,14 +120,12 @@ def store(key: str, table: ScatteringTable) -> None:
         return
     parts = {name: getattr(table, name, None) for name in _ARRAYS}
     parts["index_n"], parts["index_k"] = table.index.real, table.index.imag
-    parts = {name: np.ascontiguousarray(value, dtype="<f8") for name, value in parts.items()}
+    parts = {name: np.ascontiguousarray(value, dtype="<f8") for name, value in parts.items() if value is not None}
     head = {
         "format": FORMAT,
         "key": key,
         "shapes": {name: value.shape for name, value in parts.items()},
-        "method": table.method,
-        "rays": table.rays,
-        "seed": table.seed,
+        **{name: getattr(table, name) for name in _PLAIN},
     }
     head["sha256"] = _digest(head, parts.values())
 

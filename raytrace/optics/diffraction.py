@@ -34,7 +34,7 @@ def reflected_sr(index: float, angle_deg: np.ndarray) -> np.ndarray:
 
 
 def diffracted_sr(size_parameter: float, angle_edges_deg: np.ndarray) -> np.ndarray:
-    """Fraunhofer diffraction by a disc, mean over bins: Rayleigh's share within a ring, 1 - J0^2 - J1^2 of x sin(theta).
+    """Fraunhofer diffraction by a disc, mean over bins; within a ring lies 1 - J0^2 - J1^2 of it (Rayleigh 1881).
 
     Parameters
     ----------

@@ -19,6 +19,7 @@ GLORY_FROM_DEG, GLORY_FULL_DEG = 162.0, 166.0
 _GLORY_X = 3000.0
 """Larger drops have glories smaller than 0.1 deg, which the sun's disc hides; their orders are added up."""
 _SMALLEST_X = 0.02
+_ROWS_AT_ONCE = 8
 # closer to the sun than this, grids are too coarse for what large drops diffract
 _NEAR_DEG, _NEAR_X = 3.0, 1500.0
 
@@ -61,13 +62,18 @@ class RowMaker:
         How many sizes are averaged in the end.
     glory : bool
         Whether `whole_sr` is made.
+    keep : bool
+        Keep what Airy bows need of an index, 20 MB each, for later calls.
     """
 
-    def __init__(self, angle_edges_deg, paths: int, method: str, sizes: int, *, glory: bool = False):
+    def __init__(
+        self, angle_edges_deg, paths: int, method: str, sizes: int, *, glory: bool = False, keep: bool = False
+    ):
         self.edges_deg = np.asarray(angle_edges_deg, dtype=np.float64)
         self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
         self.paths, self.method, self.sizes, self.glory = paths, method, sizes, glory
         self._means = BinMeans(self.edges_deg)
+        self._kept = {} if keep else None
         self._near = self.angle_deg < _NEAR_DEG
 
     def prepare(self, nodes: SizeNodes, wavelength_nm) -> None:
@@ -91,22 +97,26 @@ class RowMaker:
         Returns
         -------
         Rows
+            Their weights are those of `nodes`, a column an order.
         """
         bins = self.angle_deg.size
         x = _size_parameter(nodes.diameter_mm, wavelength_nm)
         chosen = choose(self.method, x, self.paths, index.real)
+        weight = nodes.weight
+        by_rays = weight * (chosen == RAYS)
         out = Rows(
             np.zeros((self.paths, 2, bins)),
             np.zeros((2, bins)),
             np.zeros((2, bins)),
-            nodes.weight @ (chosen == RAYS),
-            (nodes.weight * (x > _GLORY_X)) @ (chosen == RAYS),
+            by_rays.sum(axis=0),
+            by_rays[x > _GLORY_X].sum(axis=0),
         )
-        self._add_waves(out, index, x, nodes.weight, chosen == WAVES, stop)
-        self._add_airy(out, index, x, nodes.weight, chosen == AIRY, stop)
-        self._add_diffraction(out, index, x, nodes.weight, chosen[:, 0] == WAVES)
+        self._add_waves(out, index, x, weight, (chosen == WAVES) & (weight > 0), stop)
+        self._add_airy(out, index, x, weight, (chosen == AIRY) & (weight > 0), stop)
+        self._add_diffraction(out, index, x, weight[:, 0], chosen[:, 0] == WAVES)
         if self.glory:
-            self._add_whole(out, index, x, nodes.weight, stop)
+            # the finest rule of all orders serves their sum
+            self._add_whole(out, index, x, weight[:, np.argmax((weight > 0).sum(axis=0))], stop)
         return out
 
     def _add_waves(self, out, index, x, weight, wanted, stop):
@@ -120,15 +130,22 @@ class RowMaker:
             mu, orders = cosines(count), list(orders)
             row_of = np.full(self.paths, -1)
             row_of[orders] = np.arange(len(orders))
-            total = np.zeros((len(orders), 2, count))
-            for i in members:
+            # few orders leave room for several drops at once, which share the Legendre functions of the angles
+            at_once = max(1, _ROWS_AT_ONCE // len(orders))
+            total = np.zeros((at_once * len(orders), 2, count))
+            for first in range(0, len(members), at_once):
                 if stop is not None and stop.is_set():
                     return
-                coefficients = order_coefficients(index, x[i], row_of)
-                add_intensities(mu, coefficients, weight[i] / (2.0 * np.pi * x[i] ** 2), total)
+                some = members[first : first + at_once]
+                parts = [order_coefficients(index, x[i], row_of) for i in some]
+                for i, part in zip(some, parts, strict=True):
+                    by_order = part.reshape(len(part), len(orders), -1)
+                    by_order *= (np.sqrt(weight[i, orders] / (2.0 * np.pi)) / x[i])[:, None]
+                add_intensities(mu, _side_by_side(parts), total[: len(some) * len(orders)])
+            total = total.reshape(at_once, len(orders), 2, count).sum(axis=0)
             added = self._means.of(total)
             if coarse and orders[0] == 0:
-                added[0][:, self._near] = self._near_the_sun(index, x[members], weight[members])
+                added[0][:, self._near] = self._near_the_sun(index, x[members], weight[members, 0])
             out.phase_sr[orders] += added
             if large:
                 out.whole_sr[:] += added.sum(axis=0)
@@ -137,17 +154,26 @@ class RowMaker:
         if not wanted.any():
             return
         highest = int(np.flatnonzero(wanted.any(axis=0))[-1])
-        prepared = prepare_airy(index, self.edges_deg, highest + 1)
+        prepared = self._prepared(index, highest + 1)
         light = np.empty_like(prepared.ray_phase_sr)
         for i in np.flatnonzero(wanted.any(axis=1)):
             if stop is not None and stop.is_set():
                 return
-            airy_phase_prepared(prepared, max(x[i], 1.0), index.imag, out=light)
             orders = np.flatnonzero(wanted[i])
-            light *= weight[i]
-            out.phase_sr[orders] += light[orders]
+            # higher orders than a drop wants are left out
+            needed = prepared._replace(starts=prepared.starts[: 2 * (orders[-1] + 1) + 1])
+            airy_phase_prepared(needed, max(x[i], 1.0), index.imag, out=light)
+            part = weight[i, orders, None, None] * light[orders]
+            out.phase_sr[orders] += part
             if x[i] > _GLORY_X:
-                out.whole_sr[:] += light[orders].sum(axis=0)
+                out.whole_sr[:] += part.sum(axis=0)
+
+    def _prepared(self, index, paths):
+        if self._kept is None:
+            return prepare_airy(index, self.edges_deg, paths)
+        if (index, paths) not in self._kept:
+            self._kept[index, paths] = prepare_airy(index, self.edges_deg, paths)
+        return self._kept[index, paths]
 
     def _near_the_sun(self, index, x, weight):
         """(2, near bins) order p = 0 of large drops: rings of their own there, finer than the grid, and reflection."""
@@ -175,10 +201,24 @@ class RowMaker:
             total = totals.setdefault(count, np.zeros((1, 2, count)))
             part = np.zeros((1, 2, count - first))
             mu = np.ascontiguousarray(cosines(count)[first:])
-            add_intensities(mu, whole_coefficients(index, x[i]), weight[i] / (2.0 * np.pi * x[i] ** 2), part)
+            coefficients = whole_coefficients(index, x[i])
+            coefficients *= np.sqrt(weight[i] / (2.0 * np.pi)) / x[i]
+            add_intensities(mu, coefficients, part)
             total[:, :, first:] += part
         for _, total in sorted(totals.items()):
             out.whole_sr[:] += self._means.of(total[0])
+
+
+def _side_by_side(parts):
+    """Coefficients of several drops as rows of one array, filled up with zeros to the groups of the largest."""
+    if len(parts) == 1:
+        return parts[0]
+    out = np.zeros((max(len(part) for part in parts), sum(part.shape[1] for part in parts)))
+    column = 0
+    for part in parts:
+        out[: len(part), column : column + part.shape[1]] = part
+        column += part.shape[1]
+    return out
 
 
 def _size_parameter(diameter_mm, wavelength_nm):

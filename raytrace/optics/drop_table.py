@@ -15,8 +15,11 @@ from raytrace.optics.size_nodes import SizeNodes, refine
 from raytrace.optics.sphere import absorption_exponent, trace_sphere
 from raytrace.optics.table import ScatteringTable
 
-SIZE_TOLERANCE = 0.005
-"""Doubling the sizes ends when it moves no order by more than this share of its largest value after the sun's disc."""
+SIZE_TOLERANCE = 0.01
+"""Doubling the sizes ends for an order when it moves it by no more than this share of its largest value after the sun's
+disc, farther than `OFF_AXIS_DEG` from the sun and from the antisolar point. The finer average, nearer still, is taken.
+"""
+OFF_AXIS_DEG = 2.0
 MOST_SIZES = 2048
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
@@ -72,7 +75,7 @@ def drop_table(
     wavelength = np.atleast_1d(np.asarray(wavelength_nm, dtype=np.float64))
     edges = np.linspace(0.0, 180.0, bins + 1)
     nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
-    maker = RowMaker(edges, paths, method, nodes.weight.size, glory=glory)
+    maker = RowMaker(edges, paths, method, nodes.diameter_mm.size, glory=glory)
     maker.prepare(nodes, wavelength)
     phase, aureole = np.empty((paths, 2, wavelength.size, bins)), np.empty((2, wavelength.size, bins))
     whole, share = np.empty_like(aureole), np.empty((2, paths, wavelength.size))
@@ -110,8 +113,8 @@ def drop_table(
         rays=traced,
         seed=int(seed),
         aureole_sr=aureole,
-        sizes=int(nodes.weight.size),
-        size_error=moved,
+        sizes=int(nodes.diameter_mm.size),
+        size_error=float(moved.max()),
     )
     return _with_glory(table, whole) if glory else table
 
@@ -148,14 +151,16 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
     """Sizes that are fine enough at the first, the middle and the last wavelength."""
     probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
     disc = DiscFold(edges, _DISC_DEG, wavelength[probes], threads=threads)
+    middle = 0.5 * (edges[1:] + edges[:-1])
+    off_axis = (middle > OFF_AXIS_DEG) & (middle < 180.0 - OFF_AXIS_DEG)
     # averages of few sizes are made on the grids of many, so that all rules see the same
-    maker = RowMaker(edges, paths, method, MANY_SIZES)
+    maker = RowMaker(edges, paths, method, MANY_SIZES, keep=True)
     # what rays bring is the same for all sizes; they serve at most p = 0 and 1, whose rays are known in closed form
     traced = [prepare_airy(index[w], edges, min(paths, 2)).ray_phase_sr.sum(axis=1) for w in probes]
 
     def average(nodes):
         maker.prepare(nodes, wavelength[probes])
-        pieces = range(0, nodes.weight.size, _CHUNK)
+        pieces = range(0, nodes.diameter_mm.size, _CHUNK)
         found = {}
 
         def one(w, first):
@@ -180,11 +185,12 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
         return np.stack(folded)
 
     def distance(coarse, fine):
-        coarse, fine = seen(coarse), seen(fine)
+        # foci on the axis are narrow and change with each size; sun and the observer's own shadow stand there
+        coarse, fine = seen(coarse)[..., off_axis], seen(fine)[..., off_axis]
         peak = fine.max(axis=-1, keepdims=True)
-        return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0))
+        return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0), axis=(0, 2))
 
-    return refine(spectrum, average, distance, tolerance=SIZE_TOLERANCE, most_steps=MOST_SIZES)
+    return refine(spectrum, average, distance, quantities=paths, tolerance=SIZE_TOLERANCE, most_steps=MOST_SIZES)
 
 
 def _with_glory(table: ScatteringTable, whole) -> ScatteringTable:

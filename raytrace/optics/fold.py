@@ -249,7 +249,7 @@ def project_with_sun_disc(
     (rows, n_angle, n_channel) float64
         Rows as of `ScatteringTable.light_sr`.
     """
-    both = table.light_sr(aureole=aureole).sum(axis=1)
+    both = table.light_sr(aureole=aureole)
     if diameter_deg == 0:
         return np.ascontiguousarray(np.einsum("pwa,wc->pac", both, spectral_weights, optimize=True))
     profile = limb_darkening(table.wavelength_nm)

@@ -16,9 +16,9 @@ MEASURED_INDEX = (1.32, 1.36)
 def choose(method: str, size_parameter, paths: int, index: float) -> np.ndarray:
     """Method for each drop and order.
 
-    `auto` takes the cheapest method whose error against the Debye series is below 1 % of the order's largest value after
-    the sun's disc, as `data/optics_methods.csv` has it: measured for water, order by order up to p = 7. What is not
-    measured is left to the waves.
+    `auto` takes the cheapest method whose error against the Debye series is below 1 % of the order's largest value
+    after the sun's disc, as `data/optics_methods.csv` has it: measured for water, order by order up to p = 7. What is
+    not measured is left to the waves.
 
     Parameters
     ----------

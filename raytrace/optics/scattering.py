@@ -1,4 +1,4 @@
-"""From the scene to its scattering tables, traced or from the cache."""
+"""From the scene to its scattering tables, made or from the cache."""
 
 from __future__ import annotations
 
@@ -6,7 +6,7 @@ import sys
 
 import numpy as np
 
-from raytrace.drops.sizes import drop_sizes
+from raytrace.drops.sizes import size_spectrum
 from raytrace.drops.water import refractive_index
 from raytrace.errors import InputError
 from raytrace.optics import cache
@@ -27,7 +27,8 @@ def scattering_table(
     """Scattering by the mean drop of one curtain of rain, for parallel light.
 
     In ray optics the size of a drop matters only through absorption, whose chord scales with the diameter; the
-    cross-section weighted mean diameter (volume over cross-section) is exact to first order in that absorption.
+    cross-section weighted mean diameter (volume over cross-section) is exact to first order in that absorption. With
+    Airy bows and waves each size counts for itself.
 
     Parameters
     ----------
@@ -49,40 +50,60 @@ def scattering_table(
     InputError
         If the scene has no such curtain.
     """
-    arguments = _arguments(scene, curtain)
-    key = cache.table_key(**arguments)
+    method, arguments = _arguments(scene, curtain)
+    key = cache.table_key(method=method, **arguments)
     if use_cache and (table := cache.load(key)) is not None:
         return table
     from tqdm import tqdm
 
-    from raytrace.optics.sphere import trace_sphere
-
+    make = _maker(method)
     with tqdm(
-        total=arguments["index"].size, desc="tracing drops", unit="wavelength", disable=not progress, file=sys.stderr
+        total=arguments["index"].size, desc=_DOING[method], unit="wavelength", disable=not progress, file=sys.stderr
     ) as bar:
-        table = trace_sphere(**arguments, threads=threads, on_done=bar.update)
+        table = make(**arguments, threads=threads, on_done=bar.update)
     if use_cache:
         cache.store(key, table)
     return table
 
 
+_DOING = {"rays": "tracing drops", "airy": "Airy bows", "waves": "waves in drops", "auto": "light in drops"}
+
+
+def _maker(method: str):
+    if method == "rays":
+        from raytrace.optics.sphere import trace_sphere
+
+        return trace_sphere
+    import functools
+
+    from raytrace.optics.drop_table import drop_table
+
+    return functools.partial(drop_table, method=method)
+
+
 def is_cached(scene) -> list[bool]:
     """Whether the table of each curtain lies in the cache (it is not read)."""
-    paths = [cache.path_of(cache.table_key(**_arguments(scene, c))) for c in range(len(scene.rain))]
-    return [path is not None and path.is_file() for path in paths]
+    found = []
+    for curtain in range(len(scene.rain)):
+        method, arguments = _arguments(scene, curtain)
+        path = cache.path_of(cache.table_key(method=method, **arguments))
+        found.append(path is not None and path.is_file())
+    return found
 
 
-def _arguments(scene, curtain: int) -> dict:
+def _arguments(scene, curtain: int) -> tuple[str, dict]:
     if not 0 <= curtain < len(scene.rain):
         raise InputError(f"curtain {curtain} given; the scene has {len(scene.rain)}, counted from 0")
     rain, optics = scene.rain[curtain], scene.optics
-    wavelength = wavelengths_nm(optics)
-    return {
+    wavelength, spectrum = wavelengths_nm(optics), size_spectrum(rain)
+    arguments = {
         "index": refractive_index(rain, scene.air, wavelength),
         "wavelength_nm": wavelength,
-        "diameter_mm": float(drop_sizes(rain).effective_diameter_mm),
         "paths": optics.paths,
         "rays": optics.rays,
         "bins": optics.bins,
         "seed": optics.seed,
     }
+    if optics.method == "rays":
+        return "rays", arguments | {"diameter_mm": spectrum.effective_mm()}
+    return optics.method, arguments | {"spectrum": spectrum, "glory": optics.glory}

@@ -23,8 +23,8 @@ class SizeNodes(NamedTuple):
     ----------
     diameter_mm : (m,) float64
         Rising [mm].
-    weight : (m,) float64
-        They add up to 1.
+    weight : (m, quantities) float64
+        For each quantity that is averaged they add up to 1; zero where it can do without a diameter.
     """
 
     diameter_mm: np.ndarray
@@ -59,55 +59,68 @@ class SizeAxis:
         # w dD/dv = w L / sqrt(w / D)
         return diameter, self._length * np.sqrt(density * diameter)
 
-    def nodes(self, steps: int) -> SizeNodes:
-        """The trapezoidal rule with so many steps, its weights scaled to a sum of 1."""
+    def nodes(self, steps: int, quantities: int = 1) -> SizeNodes:
+        """The trapezoidal rule with so many steps for all quantities, its weights scaled to a sum of 1."""
         diameter, weight = self.at(np.linspace(0.0, 1.0, steps + 1))
         weight[[0, -1]] *= 0.5
-        return SizeNodes(diameter, weight / weight.sum())
+        return SizeNodes(diameter, np.repeat((weight / weight.sum())[:, None], quantities, axis=1))
 
-    def between(self, steps: int) -> SizeNodes:
+    def between(self, steps: int, quantities: int = 1) -> SizeNodes:
         """The nodes half way between those of the rule with so many steps, their weights scaled to a sum of 1."""
         diameter, weight = self.at((np.arange(steps) + 0.5) / steps)
-        return SizeNodes(diameter, weight / weight.sum())
+        return SizeNodes(diameter, np.repeat((weight / weight.sum())[:, None], quantities, axis=1))
 
-    def total(self, steps: int, *, between: bool = False) -> float:
-        """Sum of the weights before scaling, over the number of steps: what the rule makes of the spectrum's whole."""
-        v = (np.arange(steps) + 0.5) / steps if between else np.linspace(0.0, 1.0, steps + 1)
-        weight = self.at(v)[1]
-        if not between:
-            weight[[0, -1]] *= 0.5
-        return float(weight.sum() / steps)
+    def nested(self, steps) -> SizeNodes:
+        """Rules of (quantities,) numbers of steps, each a divisor of the largest, on the nodes of the largest."""
+        most = max(steps)
+        diameter, _ = self.at(np.linspace(0.0, 1.0, most + 1))
+        weight = np.zeros((most + 1, len(steps)))
+        for q, count in enumerate(steps):
+            weight[:: most // count, q] = self.nodes(count).weight[:, 0]
+        return SizeNodes(diameter, weight)
+
+    def totals(self, steps: int) -> tuple[float, float]:
+        """What the rule with so many steps, and its points half way between, make of the spectrum's whole, about 1."""
+        ends, middle = self.at(np.linspace(0.0, 1.0, steps + 1))[1], self.at((np.arange(steps) + 0.5) / steps)[1]
+        return float((ends.sum() - 0.5 * (ends[0] + ends[-1])) / steps), float(middle.sum() / steps)
 
 
-def refine(spectrum, average, distance, *, tolerance: float, most_steps: int) -> tuple[SizeNodes, float]:
-    """Nodes that are fine enough for what is averaged.
+def refine(
+    spectrum, average, distance, *, quantities: int, tolerance: float, most_steps: int
+) -> tuple[SizeNodes, np.ndarray]:
+    """Nodes that are fine enough for what is averaged, each quantity for itself.
 
     Parameters
     ----------
     spectrum : SizeSpectrum
     average : callable
-        Of SizeNodes; the weighted sum of what is averaged, an array.
+        Of SizeNodes; the weighted sums of what is averaged, an array.
     distance : callable
-        Of two averages, the coarser and the finer: how far they are apart, on the scale of `tolerance`.
+        Of two averages, the coarser and the finer: (quantities,) how far they are apart, on the scale of `tolerance`.
+    quantities : int
     tolerance : float
-        Doubling ends when the last doubling moved the average by no more; the finer rule is taken.
+        Doubling ends for a quantity when the last doubling moved it by no more; the finer rule is taken.
     most_steps : int
         Doubling ends at the latest here.
 
     Returns
     -------
     nodes : SizeNodes
-    moved : float
-        How far the last doubling moved the average; 0 for drops of one size.
+    moved : (quantities,) float64
+        How far the last doubling moved each; 0 for drops of one size.
     """
     if spectrum.low_mm == spectrum.high_mm:
-        return SizeNodes(np.array([spectrum.low_mm]), np.ones(1)), 0.0
+        return SizeNodes(np.array([spectrum.low_mm]), np.ones((1, quantities))), np.zeros(quantities)
     axis, steps = SizeAxis(spectrum), FIRST_STEPS
-    coarse, whole = average(axis.nodes(steps)), axis.total(steps)
+    coarse = average(axis.nodes(steps, quantities))
+    settled, moved = np.zeros(quantities, dtype=int), np.zeros(quantities)
     while True:
-        added, share = average(axis.between(steps)), axis.total(steps, between=True)
+        whole, share = axis.totals(steps)
+        added = average(axis.between(steps, quantities))
         fine = (whole * coarse + share * added) / (whole + share)
-        moved = float(distance(coarse, fine))
-        steps, coarse, whole = 2 * steps, fine, 0.5 * (whole + share)
-        if moved <= tolerance or 2 * steps > most_steps:
-            return axis.nodes(steps), moved
+        now = np.asarray(distance(coarse, fine))
+        steps, coarse = 2 * steps, fine
+        fresh = (settled == 0) & ((now <= tolerance) | (2 * steps > most_steps))
+        settled[fresh], moved[fresh] = steps, now[fresh]
+        if settled.all():
+            return axis.nested(settled.tolist()), moved

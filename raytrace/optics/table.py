@@ -80,27 +80,33 @@ class ScatteringTable:
         """(paths, 2, n_wavelength) shares of the intercepted light that leave in each order and polarisation."""
         return self.phase_sr @ self.solid_angle_sr
 
-    def light_sr(self, *, aureole: bool = False) -> np.ndarray:
+    def light_sr(self, *, aureole: bool = False, polarised: bool = False) -> np.ndarray:
         """Rows of light that are drawn: the orders, without what is diffracted; the glory; and the aureole.
 
         Parameters
         ----------
         aureole : bool
             Whether the aureole, light near the sun that is diffracted, gets a row.
+        polarised : bool
+            Whether the polarisations are kept apart.
 
         Returns
         -------
-        (rows, 2, n_wavelength, n_angle) float64
+        (rows, n_wavelength, n_angle) or (rows, 2, n_wavelength, n_angle) float64
             paths rows, one more where there is a glory, one more for the aureole [sr⁻¹].
         """
+
+        def whole(values):
+            return values if polarised else values.sum(axis=-3)
+
         extra = [] if self.glory_sr is None else [self.glory_sr]
         if aureole:
             extra.append(np.zeros_like(self.phase_sr[0]) if self.aureole_sr is None else self.aureole_sr)
-        if not extra and self.aureole_sr is None:
-            return self.phase_sr
-        rows = np.concatenate([self.phase_sr, np.stack(extra)] if extra else [self.phase_sr])
+        rows = whole(self.phase_sr)
+        if extra or self.aureole_sr is not None:
+            rows = np.concatenate([rows, *(whole(part)[None] for part in extra)])
         if self.aureole_sr is not None:
-            rows[0] -= self.aureole_sr
+            rows[0] -= whole(self.aureole_sr)
         return rows
 
     def with_sun_disc(self, diameter_deg: float = 0.533, *, threads: int | None = None) -> ScatteringTable:

@@ -113,8 +113,13 @@ class Rain(Table):
 
 
 class Optics(Table):
-    """How finely light in drops is traced."""
+    """How light in drops is worked out, and how finely."""
 
+    method: Literal["auto", "rays", "airy", "waves"] = Field(
+        "auto", description="rays; Airy bows; exact waves; or for each size and order the cheapest that is good to 1 %"
+    )
+    aureole: bool = Field(False, description="draw the light that drops diffract close to the sun")
+    glory: bool = Field(False, description="draw the glory: orders interfere near the antisolar point")
     paths: int = Field(8, ge=3, le=16, description="Debye orders traced, p = 0 to paths - 1; 3 reaches the primary")
     rays: int = Field(4_000_000, ge=1_000, le=10_000_000_000, description="incident rays a wavelength")
     bins: int = Field(9_000, ge=180, le=90_000, description="bins of scattering angle from 0 to 180 degrees")

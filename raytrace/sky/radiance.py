@@ -26,14 +26,17 @@ _KOSCHMIEDER = -math.log(0.02)
 _PIECE = 16_384
 
 
-def layer_names(paths: int) -> list[str]:
-    """Names of the layers, in the order in which they are added up.
+def layer_names(optics) -> list[str]:
+    """Names of the layers of a scene's optics, in the order in which they are added up.
 
-    `external` and `straight` are the Debye orders p = 0 and 1; `order1` is the primary bow's (p = 2), and so on.
+    `external` and `straight` are the Debye orders p = 0 and 1; `order1` is the primary bow's (p = 2), and so on; then
+    `glory` and `aureole`, where the scene asks for them.
     """
-    return ["sky", "sun", "cloud", "ground", "veil", "skylit_rain", "external", "straight"] + [
-        f"order{k}" for k in range(1, paths - 1)
-    ]
+    names = ["sky", "sun", "cloud", "ground", "veil", "skylit_rain", "external", "straight"]
+    names += [f"order{k}" for k in range(1, optics.paths - 1)]
+    # rays know of no glory
+    has_glory = optics.glory and optics.method != "rays"
+    return names + ["glory"] * has_glory + ["aureole"] * optics.aureole
 
 
 def with_sky_illuminance(scene, light: Illumination) -> Illumination:
@@ -51,7 +54,12 @@ def with_sky_illuminance(scene, light: Illumination) -> Illumination:
 
 
 def order_xyz(
-    table: ScatteringTable, direct_normal: np.ndarray, disc_diameter_deg: float, *, threads=None
+    table: ScatteringTable,
+    direct_normal: np.ndarray,
+    disc_diameter_deg: float,
+    *,
+    aureole: bool = False,
+    threads=None,
 ) -> np.ndarray:
     """Radiance of each order under the sun's disc, per unit of sunlit rain.
 
@@ -63,14 +71,16 @@ def order_xyz(
         Direct normal irradiance [W m-2 nm-1].
     disc_diameter_deg : float
         Diameter of the sun's disc [deg].
+    aureole : bool
+        Whether what is diffracted gets a row, the last one.
 
     Returns
     -------
-    (paths, n_angle, 3) float64
-        XYZ [cd/m2].
+    (rows, n_angle, 3) float64
+        XYZ, rows as of `ScatteringTable.light_sr` [cd/m2].
     """
     weights = direct_normal[:, None] * colour.xyz_weights(table.wavelength_nm)
-    return project_with_sun_disc(table, weights, disc_diameter_deg, threads=threads)
+    return project_with_sun_disc(table, weights, disc_diameter_deg, aureole=aureole, threads=threads)
 
 
 def prepare_view(
@@ -91,7 +101,7 @@ def prepare_view(
     scene : Scene
     light : Illumination
         From `with_sky_illuminance`.
-    order_tables : sequence of (paths, n_angle, 3) array
+    order_tables : sequence of (rows, n_angle, 3) array
         From `order_xyz`, one a curtain.
     phases : sequence of (n_angle,) array
         Total phase function of each curtain's drops, any scale.
