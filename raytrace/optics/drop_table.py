@@ -11,8 +11,9 @@ from raytrace.optics.airy import prepare_airy
 from raytrace.optics.angle_grids import MANY_SIZES
 from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker
 from raytrace.optics.fold import DiscFold
+from raytrace.optics.methods import choose
 from raytrace.optics.size_nodes import SizeNodes, refine
-from raytrace.optics.sphere import absorption_exponent, trace_sphere
+from raytrace.optics.sphere import absorption_exponent, checked_arguments, trace_sphere
 from raytrace.optics.table import ScatteringTable
 
 SIZE_TOLERANCE = 0.01
@@ -50,7 +51,7 @@ def drop_table(
         In air, rising [nm].
     spectrum : SizeSpectrum
     method : str
-        "airy", "waves" or "auto"; see `methods.choose`. Rays that these leave orders to are traced by `trace_sphere`.
+        One of `methods.METHODS`; see `methods.choose`. Rays that these leave orders to are traced by `trace_sphere`.
     paths, bins, rays, seed
         As for `trace_sphere`.
     glory : bool
@@ -69,10 +70,9 @@ def drop_table(
     Raises
     ------
     ValueError
-        If an argument is out of range.
+        If an argument is out of range; the message gives the range.
     """
-    index = np.atleast_1d(np.asarray(index, dtype=np.complex128))
-    wavelength = np.atleast_1d(np.asarray(wavelength_nm, dtype=np.float64))
+    index, wavelength = _checked(index, wavelength_nm, spectrum, method, paths, rays, bins, seed, threads)
     edges = np.linspace(0.0, 180.0, bins + 1)
     nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
     maker = RowMaker(edges, paths, method, nodes.diameter_mm.size, glory=glory)
@@ -117,6 +117,19 @@ def drop_table(
         size_error=float(moved.max()),
     )
     return _with_glory(table, whole) if glory else table
+
+
+def _checked(index, wavelength_nm, spectrum, method, paths, rays, bins, seed, threads):
+    """Index and wavelengths as arrays, once every argument is found to be in range."""
+    choose(method, 1.0, 1, 1.0)
+    if wavelength_nm is None:
+        raise ValueError("wavelength_nm is missing; one wavelength for each index works")
+    n, k, wavelength = checked_arguments(index, paths, rays, bins, seed, wavelength_nm, spectrum.effective_mm())
+    if not (np.diff(wavelength) > 0).all():
+        raise ValueError("wavelength_nm does not rise; rising values work")
+    if threads is not None and threads < 1:
+        raise ValueError(f"threads={threads!r} given; whole numbers from 1 work")
+    return n + 1j * k, wavelength
 
 
 def balance(index, wavelength_nm, diameter_mm: float, paths: int) -> tuple[np.ndarray, np.ndarray]:

@@ -33,7 +33,14 @@ def choose(method: str, size_parameter, paths: int, index: float) -> np.ndarray:
     -------
     (m, paths) int8
         RAYS, AIRY or WAVES.
+
+    Raises
+    ------
+    ValueError
+        If there is no such method.
     """
+    if method not in METHODS:
+        raise ValueError(f"method {method!r} given; {', '.join(METHODS)} work")
     x = np.atleast_1d(np.asarray(size_parameter, dtype=np.float64))[:, None]
     p = np.arange(paths)
     if method == "auto":

@@ -72,7 +72,7 @@ def trace_sphere(
     ValueError
         If an argument is out of range; the message gives the range.
     """
-    n, k, wavelength_nm = _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm)
+    n, k, wavelength_nm = checked_arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm)
     per_block = -(-rays // BLOCKS)
     edges = np.linspace(0.0, 180.0, bins + 1)
     # half the power of unpolarised light is in each polarisation
@@ -203,7 +203,8 @@ def _compile(paths):
         _trace_blocks(tiny, np.ones(2), *np.empty((2, paths, 2, 2)), 1, threading.Event())
 
 
-def _arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm):
+def checked_arguments(index, paths, rays, bins, seed, wavelength_nm, diameter_mm):
+    """Real and imaginary part of the index and the wavelengths as arrays; ValueError as `trace_sphere` says."""
     index = np.atleast_1d(np.asarray(index, dtype=np.complex128))
     n, k = cast.f64(index.real, name="index", ndim=1), cast.f64(index.imag, name="index", ndim=1)
     if n.size == 0:
