@@ -1,5 +1,6 @@
 """Fraunhofer's rings and the light that the outside of a drop reflects, against closed forms and traced rays."""
 
+import itertools
 import math
 
 import numpy as np
@@ -106,7 +107,7 @@ def test_both_together_are_the_waves_of_order_0():
     fine = np.linspace(0.0, 12.0, 12_001)
     rings = np.cumsum(np.append(0.0, diffracted_sr(x, fine) * ring_solid_angle_sr(fine)))
     more = 0.0
-    for low, high in zip(edges[:-1], edges[1:], strict=True):
+    for low, high in itertools.pairwise(edges):
         angle, step = np.linspace(low, high, 4001, retstep=True)
         angle = angle[:-1] + 0.5 * step
         ring = 2 * math.pi * math.radians(step) * np.sin(np.radians(angle))

@@ -1,5 +1,6 @@
 """Averages over drop sizes against adaptive integration: the error is what it is said to be, for every size law."""
 
+import itertools
 import math
 
 import numpy as np
@@ -33,7 +34,7 @@ def exact(spectrum, function):
     edges = edges[(edges >= spectrum.low_mm) & (edges <= spectrum.high_mm)]
 
     def over(f):
-        return sum(quad(f, a, b, limit=200)[0] for a, b in zip(edges[:-1], edges[1:], strict=True))
+        return sum(quad(f, a, b, limit=200)[0] for a, b in itertools.pairwise(edges))
 
     whole = over(lambda d: float(spectrum.density_per_mm(d)))
     return over(lambda d: float(spectrum.density_per_mm(d)) * function(d)) / whole
