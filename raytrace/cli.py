@@ -146,6 +146,9 @@ def _parse(arguments: list[str]):
     compare.add_argument("--csv", metavar="FILE", help="write the figures as CSV")
     compare.add_argument("--plot", metavar="PNG", help="draw the figures")
     compare.add_argument("--seed", metavar="N", help="seed of the rays, in place of the scene's")
+    compare.add_argument(
+        "--method", metavar="NAME", help="rays, airy, waves or auto, in place of the scene's; rays for a drop"
+    )
     compare.add_argument("--threads", metavar="N", help="threads to use; all cores unless given")
     compare.set_defaults(command=_compare)
 
@@ -200,7 +203,9 @@ def _compare(options) -> int:
         for name, text in given.items()
         if text is not None
     }
-    asked, drop = ({name: given[name] for name in some if name in given} for some in (whole, names))
+    if options.method is not None:
+        given["method"] = options.method
+    asked, drop = ({name: given[name] for name in some if name in given} for some in ((*whole, "method"), names))
     outputs = {kind: getattr(options, kind) for kind in ("json", "csv", "plot") if getattr(options, kind) is not None}
     paths = {kind: _output(given, options.scene, ".png" if kind == "plot" else None) for kind, given in outputs.items()}
     _spare_each_other(paths)

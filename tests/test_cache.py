@@ -14,6 +14,7 @@ from skies import make_scene
 
 from raytrace.errors import CacheWarning, InputError
 from raytrace.optics import cache, scattering, scattering_table, sphere, trace_sphere
+from raytrace.optics.drop_table import drop_table
 from raytrace.optics.scattering import is_cached, wavelengths_nm
 
 KEY = "k" * 64
@@ -51,6 +52,11 @@ def same(a, b):
         x, y = getattr(a, name), getattr(b, name)
         assert x.tobytes() == y.tobytes() and x.shape == y.shape and x.dtype == y.dtype, name
     assert (a.method, a.rays, a.seed, a.disc_diameter_deg) == (b.method, b.rays, b.seed, b.disc_diameter_deg)
+
+
+def key_of(scene):
+    method, arguments = scattering._arguments(scene, 0)
+    return cache.table_key(method=method, **arguments)
 
 
 def head_and_body(path):
@@ -164,7 +170,7 @@ DAMAGES = [
 @pytest.mark.parametrize("how", DAMAGES)
 def test_damaged_file_is_left_unused_with_a_warning(stored, table, how):
     damaged(stored, how)
-    with pytest.warns(CacheWarning, match="is left unused: .*; the table is traced anew") as caught:
+    with pytest.warns(CacheWarning, match="is left unused: .*; the table is made anew") as caught:
         assert cache.load(KEY) is None
     assert len(caught) == 1 and "\n" not in str(caught[0].message)
     # and is replaced by the next
@@ -200,7 +206,7 @@ def test_scene_is_traced_anew_when_its_file_is_damaged(empty_cache, scene):
 
 def test_folder_in_the_files_place(empty_cache, scene):
     first = scattering_table(scene, use_cache=False)
-    (path,) = [cache.path_of(cache.table_key(**scattering._arguments(scene, 0)))]
+    (path,) = [cache.path_of(key_of(scene))]
     path.mkdir(parents=True)
     with pytest.warns(CacheWarning, match="could not be kept"):
         same(scattering_table(scene), first)
@@ -304,7 +310,8 @@ def test_leftovers_of_killed_processes_are_cleared(stored, table):
 
 
 def test_key_changes_with_every_argument(scene):
-    arguments = scattering._arguments(scene, 0)
+    method, arguments = scattering._arguments(scene, 0)
+    assert method == "rays"
     base = cache.table_key(**arguments)
     assert base == cache.table_key(**dict(reversed(arguments.items())))
     changed = {
@@ -321,28 +328,51 @@ def test_key_changes_with_every_argument(scene):
     assert len(keys) == len(changed) + 1
 
 
-def test_key_takes_all_that_the_tracer_takes(scene):
+@pytest.mark.parametrize("method", ["rays", "airy", "waves", "auto"])
+def test_key_takes_all_that_the_maker_takes(method):
     import inspect
 
-    taken = set(inspect.signature(trace_sphere).parameters) - {"threads", "on_done"}
-    assert set(scattering._arguments(scene, 0)) == taken
+    found, arguments = scattering._arguments(make_scene(optics={**OPTICS, "method": method}), 0)
+    assert found == method
+    taken = set(inspect.signature(trace_sphere if method == "rays" else drop_table).parameters)
+    assert set(arguments) == taken - {"threads", "on_done", "method"}
 
 
-def test_key_changes_with_the_tracers_sources(monkeypatch, scene):
-    arguments = scattering._arguments(scene, 0)
-    before = cache.table_key(**arguments)
-    for name in cache._SOURCES:
+def test_key_changes_with_sources(monkeypatch, scene):
+    before = key_of(scene)
+    monkeypatch.setattr(cache, "_NO_SOURCES", (*cache._NO_SOURCES, "sphere_kernels.py"))
+    without = key_of(scene)
+    assert without != before
+    for name in cache._MORE_SOURCES:
         with monkeypatch.context() as patch:
-            patch.setattr(cache, "_SOURCES", tuple(n for n in cache._SOURCES if n != name))
-            assert cache.table_key(**arguments) != before
+            patch.setattr(cache, "_MORE_SOURCES", tuple(n for n in cache._MORE_SOURCES if n != name))
+            assert key_of(scene) != without
+
+
+def test_waves_come_back_as_they_were_kept(empty_cache):
+    wave = make_scene(
+        optics={**OPTICS, "method": "waves", "glory": True},
+        rain={"size_law": "single", "diameter_mm": 0.01, "relative_spread": 0.1, "rain_rate_mm_h": 0.01},
+    )
+    first = scattering_table(wave)
+    again = scattering_table(wave)
+    same(again, first)
+    for name in ("aureole_sr", "glory_sr"):
+        np.testing.assert_array_equal(getattr(again, name), getattr(first, name))
+    assert (again.sizes, again.size_error) == (first.sizes, first.size_error)
+    assert first.sizes > 8 and first.glory_sr.max() > 0 and first.aureole_sr.max() > 0
 
 
 def test_what_tells_scenes_apart(empty_cache):
     keys = [
-        cache.table_key(**scattering._arguments(make_scene(**more), 0))
+        key_of(make_scene(**more))
         for more in (
             {"optics": OPTICS},
             {"optics": {**OPTICS, "seed": 1}},
+            {"optics": {**OPTICS, "method": "auto"}},
+            {"optics": {**OPTICS, "method": "waves"}},
+            {"optics": {**OPTICS, "method": "waves", "glory": True}},
+            {"optics": {**OPTICS, "method": "waves"}, "rain": {"rain_rate_mm_h": 20.0}},
             {"optics": OPTICS, "rain": {"temperature_c": 11.0}},
             {"optics": OPTICS, "rain": {"water": "sea"}},
             {"optics": OPTICS, "rain": {"rain_rate_mm_h": 20.0}},
@@ -352,7 +382,7 @@ def test_what_tells_scenes_apart(empty_cache):
     assert len(set(keys)) == len(keys)
     # where the sun and the camera are is of no matter to a drop
     moved = make_scene(sun=(5.0, 100.0), camera={"roll_deg": 3.0}, optics=OPTICS)
-    assert cache.table_key(**scattering._arguments(moved, 0)) == keys[0]
+    assert key_of(moved) == keys[0]
 
 
 def test_second_time_nothing_is_traced(monkeypatch, empty_cache, scene):

@@ -406,6 +406,6 @@ def test_bars_are_drawn_on_a_terminal_only(quick, tmp_path):
         out = process.stdout.read()
     os.close(ours)
     assert process.returncode == 0 and out.startswith(b"a.png: 32x24 px")
-    assert b"tracing drops" in drawn and b"lighting pixels" in drawn and b"100%" in drawn
+    assert b"light in drops" in drawn and b"lighting pixels" in drawn and b"100%" in drawn
     plain = subprocess.run(command, cwd=tmp_path, env=environment, capture_output=True, timeout=120)
     assert plain.returncode == 0 and plain.stderr == b""

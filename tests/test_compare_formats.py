@@ -33,7 +33,7 @@ def drop():
 
 @pytest.fixture(scope="module")
 def scene():
-    return raytrace.compare(raytrace.load_scene(SCENE), orders=4, name="double_bow.toml")
+    return raytrace.compare(raytrace.load_scene(SCENE), orders=4, method="rays", name="double_bow.toml")
 
 
 def test_json_is_what_the_schema_says(drop, scene):
@@ -59,7 +59,7 @@ def test_no_bow_is_null_and_not_zero():
     row = Row(order=1, name="primary", centre=None).as_dict()
     assert row["peak_deg"] is None and row["standard_error"]["light_share"] is None
     data = {"schema": 1, "made_by": "raytrace 0", "orders": [row]}
-    data["input"] = {"orders": 1, "tolerance": 0.01, "seed": 0, "drop": dict.fromkeys(
+    data["input"] = {"orders": 1, "tolerance": 0.01, "seed": 0, "method": "rays", "drop": dict.fromkeys(
         ("diameter_mm", "temperature_c", "sun_elevation_deg", "refractive_index"), 1.0)}  # fmt: skip
     jsonschema.validate(data, SCHEMA)
 
@@ -140,7 +140,7 @@ def test_scene_table_fits_a_terminal(scene):
 
 def test_names_of_scenes_are_told_on_one_short_line(scene):
     for name in ("a\x1b[31m\nb.toml", "x" * 5000, "\udce9.toml"):
-        odd = dataclasses.replace(scene, input={"scene": scene.input["scene"] | {"name": name}})
+        odd = dataclasses.replace(scene, input=scene.input | {"scene": scene.input["scene"] | {"name": name}})
         first = odd.to_text().splitlines()[0]
         assert first.isprintable() and len(first) <= 120 and "sun 17.00 deg up" in first
         title = plot.draw(odd).axes[0].get_title(loc="left")

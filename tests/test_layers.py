@@ -81,7 +81,7 @@ def test_layers_add_up():
         camera={"height_m": 30.0, "elevation_deg": 5.0},
     )
     frame = render(scene, layers=True)
-    assert list(frame.layers) == layer_names(8)
+    assert list(frame.layers) == layer_names(scene.optics)
     assert list(frame.layers)[-6:] == ["order1", "order2", "order3", "order4", "order5", "order6"]
     total = summed(frame, frame.layers)
     np.testing.assert_allclose(total[..., 1], frame.luminance, rtol=2e-6)

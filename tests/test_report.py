@@ -71,7 +71,7 @@ def test_high_sun_puts_the_bow_below_the_horizon(tmp_path):
 
 
 def test_table_is_known_to_be_in_the_cache(scene, empty_cache):
-    assert values(scene)["rain table"] == "not traced yet"
+    assert values(scene)["rain table"] == "not made yet"
     scattering_table(scene)
     assert values(scene)["rain table"] == "in the cache"
 

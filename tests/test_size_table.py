@@ -161,7 +161,7 @@ def test_what_hangs_on_the_content(tmp_path):
     digest, extinction = scene_hash(first), drop_sizes(first.rain[0]).extinction_per_km
     second = loaded(tmp_path, ROWS.replace("300", "300.0000001"))
     assert scene_hash(second) != digest
-    assert _arguments(second, 0)["diameter_mm"] != _arguments(first, 0)["diameter_mm"]
+    assert _arguments(second, 0)[1]["spectrum"] != _arguments(first, 0)[1]["spectrum"]
     # a scene is of the rows that it was checked with
     (tmp_path / "sizes.txt").unlink()
     assert scene_hash(first) == digest

@@ -6,6 +6,7 @@ import math
 import numbers
 
 from raytrace.errors import InputError
+from raytrace.optics.methods import METHODS
 from raytrace.scene.problems import quoted
 
 MOST_ORDERS = 12
@@ -25,6 +26,7 @@ WORKS = {
     "tolerance": "a number above 0 to 0.5",
     "seed": f"a whole number from 0 to {2**63 - 1}",
     "threads": f"a whole number from 1 to {_MOST_THREADS}",
+    "method": " or ".join(f'"{name}"' for name in METHODS),
     "most_rays": f"two whole numbers from {FIRST_RAYS[0]} and {FIRST_RAYS[1]}, the first round",
 } | {
     name: f"a number {'above' if above else 'from'} {low:g} to {high:g}"
@@ -51,7 +53,7 @@ def check_drop(values: dict) -> None:
         raise InputError(*problems)
 
 
-def check_asked(*, orders, tolerance, seed, threads, most_rays) -> None:
+def check_asked(*, orders, tolerance, seed, threads, most_rays, method=None) -> None:
     """Refuse what a comparison cannot do.
 
     Raises
@@ -65,6 +67,7 @@ def check_asked(*, orders, tolerance, seed, threads, most_rays) -> None:
         "seed": (seed, seed is None or (_is_whole(seed) and 0 <= seed < 2**63)),
         "threads": (threads, threads is None or (_is_whole(threads) and 1 <= threads <= _MOST_THREADS)),
         "most_rays": (most_rays, _are_rays(most_rays)),
+        "method": (method, method is None or (isinstance(method, str) and method in METHODS)),
     }
     problems = [_out_of_range(name, value) for name, (value, works) in sound.items() if not works]
     if problems:

@@ -9,6 +9,8 @@ from raytrace.drops.bow_angle import bow_angle, bow_ray_weight
 
 RED_NM, VIOLET_NM = 700.0, 400.0
 NAMES = {1: "primary", 2: "secondary", 3: "tertiary", 4: "quaternary"}
+# A size law's larger and smaller drops have their maxima within this many times the shift of the mean one's
+_SHIFTS = 1.7
 # How far beyond the colours' edges the peak is looked for, and over which width a parabola finds its top [deg]
 _BEYOND_DEG, _TOP_DEG = 1.5, 0.12
 # Within this distance of the sun or the antisolar point light gathers on the axis; what of it lies between a bow and
@@ -33,8 +35,18 @@ def order_name(order: int) -> str:
     return NAMES.get(order, f"{order}th")
 
 
-def edges(index_red: float, index_violet: float, index_mono: float, order: int) -> dict | None:
+def edges(
+    index_red: float, index_violet: float, index_mono: float, order: int, *, size_parameter: float | None = None
+) -> dict | None:
     """Where the colours of a bow stand by ray optics, without the sun's disc.
+
+    Parameters
+    ----------
+    index_red, index_violet, index_mono : float
+        At 700, 400 and 550 nm.
+    order : int
+    size_parameter : float, optional
+        Of drops whose waves count: their peak is looked for farther on the bright side too.
 
     Returns
     -------
@@ -50,6 +62,11 @@ def edges(index_red: float, index_violet: float, index_mono: float, order: int) 
     centre = "antisolar" if angle[2] > 90 else "sun"
     red, violet = (180 - a if centre == "antisolar" else a for a in angle[:2])
     low, high = min(angle) - _BEYOND_DEG, max(angle) + _BEYOND_DEG
+    if size_parameter is not None:
+        # light is on the side of larger deviations, which run backwards through the angles in every other half turn
+        shift = _SHIFTS * main_maximum_deg(index_mono, order, size_parameter)
+        backwards = bow_angle(index_mono, order).deviation_deg // 180 % 2 == 1
+        low, high = (low - shift, high) if backwards else (low, high + shift)
     # colours on both sides of the axis: what lies between runs up to it
     if abs(turned[0] // 180 - turned[1] // 180) > 0:
         low, high = (low, 180.0) if centre == "antisolar" else (0.0, high)
@@ -62,6 +79,19 @@ def edges(index_red: float, index_violet: float, index_mono: float, order: int) 
         # of the deviations, which do not fold back at the antisolar point or the sun
         "colour_width_deg": abs(turned[1] - turned[0]),
     }
+
+
+def main_maximum_deg(index: float, order: int, size_parameter: float) -> float:
+    """How far a bow's main maximum stands from its ray, 1.018793 h^(1/3) x^(-2/3) (Airy 1838; van de Hulst 1957, 13.2).
+
+    Returns
+    -------
+    float
+        Angle toward the bright side [deg].
+    """
+    p2, n2 = (order + 1) ** 2, index**2
+    h = (p2 - 1) ** 2 / p2 * np.sqrt((p2 - n2) / (n2 - 1) ** 3)
+    return float(np.degrees(1.018793 * h ** (1 / 3) * size_parameter ** (-2 / 3)))
 
 
 def off_axis(curve, angle_deg, place, disc_radius_deg) -> tuple[float, float] | None:

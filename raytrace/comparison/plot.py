@@ -24,6 +24,13 @@ _BADGE = {"boxstyle": "circle,pad=0.18", "fc": "white", "ec": "0.3", "lw": 0.7}
 _STRIP_LEVEL = 0.35
 _STRIP_ROWS, _STRIP_COLUMNS = 60, 1800
 
+_METHOD_NOTES = {
+    "rays": "Ray optics with the sun's disc, no waves.",
+    "airy": "Airy bows with the sun's disc; grey: ray optics.",
+    "waves": "Exact waves with the sun's disc, without what is diffracted; grey: ray optics.",
+    "auto": "Rays, Airy bows or exact waves, by size and order, with the sun's disc; grey: ray optics.",
+}
+
 
 def write_plot(report, path) -> None:
     """Draw a report and write it as PNG, whole or not at all.
@@ -153,6 +160,15 @@ def _draw_luminance(axes, report) -> None:
     luminance = curves["xyz"][..., 1].sum(axis=1) * _per_illuminance(curves)
     total = luminance.sum(axis=0)
     axes.plot(radius, total, color="0.0", lw=2.4, label="all orders")
+    if curves["rays_xyz"] is not None:
+        # the same drops by ray optics, each order behind its own line
+        rays = curves["rays_xyz"][..., 1].sum(axis=1) * _per_illuminance(curves)
+        style = {"color": "0.72", "lw": 0.9, "zorder": 1.5}
+        axes.plot(radius, rays.sum(axis=0), label="by rays alone", **style)
+        for row in report.rows:
+            if row.centre is not None:
+                curve = rays[row.order + 1]
+                axes.plot(radius, np.where(curve > 0, curve, np.nan), **style)
     for p, name, dash in ((0, "external reflection", (0, (1, 1))), (1, "straight through", (0, (6, 2)))):
         axes.plot(radius, luminance[p], color="0.65", lw=1.6, ls=dash, label=name)
     for row in report.rows:
@@ -220,7 +236,7 @@ def _note(report) -> str:
     from raytrace.comparison.report import CAUTION
 
     text = (
-        "Ray optics with the sun's disc, no waves. Numbers: orders at their peaks; circles: polarisation of each bow's "
+        f"{_METHOD_NOTES[report.input['method']]} Numbers: orders at their peaks; circles: polarisation of each bow's "
         "own light there, at 550 nm. Colours: "
         f"rain before black, exposed so that the first bow's peak is at {_STRIP_LEVEL:g} of white, sRGB. "
     )

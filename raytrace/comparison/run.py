@@ -24,7 +24,8 @@ from raytrace.comparison.figures import (
 )
 from raytrace.comparison.in_scene import Sight
 from raytrace.comparison.report import Report, Row
-from raytrace.drops.sizes import drop_sizes
+from raytrace.comparison.wave_estimate import WaveEstimate
+from raytrace.drops.sizes import size_spectrum
 from raytrace.drops.water import refractive_index
 from raytrace.errors import InputError
 from raytrace.light.spectrum import before_loading_beside
@@ -47,6 +48,7 @@ def compare(
     threads: int | None = None,
     progress: bool = False,
     most_rays: tuple[int, int] = MOST_RAYS,
+    method: str | None = None,
     name: str = "scene",
 ) -> Report:
     """How bright each bow is against the others, against the glow of the same drops, and against a scene's sky.
@@ -67,6 +69,9 @@ def compare(
         Show a bar on standard error.
     most_rays : (int, int)
         Rays at 550 nm, and at each wavelength of the spectrum, at which adding ends; at least those of the first round.
+    method : str, optional
+        "rays", "airy", "waves" or "auto"; a scene's own, and rays for a drop, unless given. With the last three each
+        size of drops counts for itself, and what rays would make of them stands beside in the plot.
     name : str
         What problems call the scene.
 
@@ -80,7 +85,7 @@ def compare(
         If an argument is out of range, or the scene cannot be used.
     """
     subject = Drop() if scene_or_drop is None else scene_or_drop
-    check_asked(orders=orders, tolerance=tolerance, seed=seed, threads=threads, most_rays=most_rays)
+    check_asked(orders=orders, tolerance=tolerance, seed=seed, threads=threads, most_rays=most_rays, method=method)
     is_drop = isinstance(subject, Drop)
     if not is_drop and not isinstance(subject, Scene):
         raise InputError(
@@ -93,21 +98,24 @@ def compare(
     paths = max(orders + 2, _FEWEST_PATHS, 0 if is_drop else scene.optics.paths)
     if not is_drop:
         preflight(scene, name=name, need=needed_bytes(paths, len(scene.rain)))
+    method = ("rays" if is_drop else scene.optics.method) if method is None else method
     before_loading_beside()
-    with ThreadPoolExecutor(1) as pool:
-        # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
-        spectrum = pool.submit(_light, scene, wavelength, is_drop and subject.sun_elevation_deg is None)
+    above_the_air = is_drop and subject.sun_elevation_deg is None
+    estimates, light = _traced(scene, wavelength, paths, seed, threads, above_the_air)
+    by_rays = None
+    if method != "rays":
+        by_rays = _curves(estimates[0])["xyz"]
+        irradiance = light if isinstance(light, np.ndarray) else light.direct_normal
         estimates = [
-            _estimate(scene, c, wavelength, paths, seed, threads) for c in range(1 if is_drop else len(scene.rain))
+            WaveEstimate(scene, c, wavelength, irradiance, method, paths, seed=seed, threads=threads, progress=progress)
+            for c in range(len(scene.rain))
         ]
-        for estimate in estimates:
-            estimate.add_mono(FIRST_RAYS[0])
-        light = spectrum.result()
-    for estimate in estimates:
-        estimate.set_spectrum(light if isinstance(light, np.ndarray) else light.direct_normal)
-        estimate.add_colour(FIRST_RAYS[1])
     index = refractive_index(scene.rain[0], scene.air, [VIOLET_NM, MONO_NM, RED_NM]).real
-    places = {k: edges(float(index[2]), float(index[0]), float(index[1]), k) for k in range(1, orders + 1)}
+    size = None if method == "rays" else np.pi * _diameter_mm(scene.rain[0]) * 1e6 / MONO_NM
+    places = {
+        k: edges(float(index[2]), float(index[0]), float(index[1]), k, size_parameter=size)
+        for k in range(1, orders + 1)
+    }
     sight = None if is_drop else Sight(scene, light, threads)
     found, seen = _refine(estimates, places, tolerance, most_rays, sight, progress)
     rows = [_row(k, places[k], found.get(k), float(index[1]), tolerance) for k in places]
@@ -121,13 +129,32 @@ def compare(
             row.scene["tolerance_missed"] = [k for k, error in errors.items() if error > tolerance]
     return Report(
         rows=rows,
-        input=_input(subject, scene, name, orders, tolerance, seed, light),
+        input=_input(subject, scene, name, orders, tolerance, seed, method, light),
         rays=tuple(estimates[0].rays),
         left_over=float(estimates[0].left_over.mean()),
         tolerance=tolerance,
         most_rays=tuple(most_rays),
-        curves=_curves(estimates[0]),
+        curves=_curves(estimates[0]) | {"rays_xyz": by_rays},
     )
+
+
+def _traced(scene, wavelength, paths, seed, threads, above_the_air) -> tuple[list, object]:
+    """Estimates by rays, one a curtain, after the first round, and the light."""
+    with ThreadPoolExecutor(1) as pool:
+        # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
+        spectrum = pool.submit(_light, scene, wavelength, above_the_air)
+        estimates = [_estimate(scene, c, wavelength, paths, seed, threads) for c in range(len(scene.rain))]
+        for estimate in estimates:
+            estimate.add_mono(FIRST_RAYS[0])
+        light = spectrum.result()
+    for estimate in estimates:
+        estimate.set_spectrum(light if isinstance(light, np.ndarray) else light.direct_normal)
+        estimate.add_colour(FIRST_RAYS[1])
+    return estimates, light
+
+
+def _diameter_mm(rain) -> float:
+    return float(size_spectrum(rain).effective_mm())
 
 
 def _light(scene, wavelength, above_the_air):
@@ -147,8 +174,7 @@ def _estimate(scene, curtain, wavelength, paths, seed, threads):
         refractive_index(rain, scene.air, wavelength),
         wavelength,
         complex(refractive_index(rain, scene.air, [MONO_NM])[0]),
-        # of one size there is nothing to average, and the laws' libraries need not load
-        rain.diameter_mm if rain.size_law == "single" else float(drop_sizes(rain).effective_diameter_mm),
+        _diameter_mm(rain),
         scene.sun.disc_diameter_deg,
         paths,
         seed=seed,
@@ -182,6 +208,9 @@ def _refine(estimates, places, tolerance, most_rays, sight, progress) -> tuple[d
             million = (first.rays[0] + first.rays[1] * first.wavelength_nm.size) * len(estimates) / 1e6
             bar.set_postfix_str(f"{million:.1f} M rays, largest error {max(worst):.2%} of {tolerance:.2%}")
             more = [min(first.rays[k], most_rays[k] - first.rays[k]) if worst[k] > tolerance else 0 for k in range(2)]
+            if isinstance(first, WaveEstimate):
+                # a table is as good as it is
+                more = [0, 0]
             if max(more) < 1000:
                 return found, seen
             if more[0] >= 1000:
@@ -243,8 +272,8 @@ def _curves(estimate) -> dict:
     }
 
 
-def _input(subject, scene, name, orders, tolerance, seed, light) -> dict:
-    common = {"orders": int(orders), "tolerance": float(tolerance), "seed": int(seed)}
+def _input(subject, scene, name, orders, tolerance, seed, method, light) -> dict:
+    common = {"orders": int(orders), "tolerance": float(tolerance), "seed": int(seed), "method": method}
     if isinstance(subject, Drop):
         import dataclasses
 

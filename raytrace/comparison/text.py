@@ -76,10 +76,9 @@ def number(value, form=".3g") -> str:
 def _notes(report):
     rows = report.rows
     yield from _wrapped(
-        f"{report.rays[0] / 1e6:.3g} M rays at 550 nm and {report.rays[1] / 1e6:.3g} M at each other wavelength. "
-        "Lines with +- are standard errors. Edges are those of ray optics at 700 and 400 nm, peaks are after the "
-        "sun's disc. Three ratios are often mixed up: the share of light is that of the whole order, the bow ray's "
-        "weight is Fresnel's for one ray, the peak ratio is of radiance where each bow is brightest."
+        f"{_made(report)} Lines with +- are standard errors. Edges are those of ray optics at 700 and 400 nm, peaks "
+        "are after the sun's disc. Three ratios are often mixed up: the share of light is that of the whole order, the "
+        "bow ray's weight is Fresnel's for one ray, the peak ratio is of radiance where each bow is brightest."
     )
     stands = {}
     for row in rows:
@@ -103,6 +102,20 @@ def _notes(report):
             if row.top_elevation_deg <= 0:
                 where = f"wholly below the horizon by {-row.top_elevation_deg:.1f} deg"
             yield f"{row.name}: {where}"
+
+
+def _made(report) -> str:
+    """By what the figures are."""
+    method = report.input["method"]
+    if method == "rays":
+        mono, colour = (f"{rays / 1e6:.3g} M" for rays in report.rays)
+        return f"{mono} rays at 550 nm and {colour} at each other wavelength."
+    how = {
+        "airy": "Rays, joined to Airy bows, for each size of drops.",
+        "waves": "Exact waves for each size of drops; what is diffracted round them is left out.",
+        "auto": "Rays, Airy bows or exact waves for each size of drops and each order, whichever is good to 1 %.",
+    }[method]
+    return how + " Errors are those of what rays serve; elsewhere there is none to tell."
 
 
 def _missed(report) -> str:

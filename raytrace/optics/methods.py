@@ -51,7 +51,7 @@ def choose(method: str, size_parameter, paths: int, index: float) -> np.ndarray:
 
 
 def switch_over(paths: int, index: float) -> tuple[np.ndarray, np.ndarray]:
-    """Size parameters from which `auto` takes rays and Airy bows; infinity for never.
+    """Size parameters from which `auto` takes rays and Airy bows; infinity or 1e9 for never.
 
     Returns
     -------

@@ -50,7 +50,27 @@ def scattering_table(
     InputError
         If the scene has no such curtain.
     """
-    method, arguments = _arguments(scene, curtain)
+    return made_or_kept(*_arguments(scene, curtain), threads=threads, use_cache=use_cache, progress=progress)
+
+
+def made_or_kept(
+    method: str, arguments: dict, *, threads: int | None = None, use_cache: bool = True, progress: bool = False
+) -> ScatteringTable:
+    """A table from the cache, or made and kept there.
+
+    Parameters
+    ----------
+    method : str
+        "rays", "airy", "waves" or "auto".
+    arguments : dict
+        Of `trace_sphere` for rays, of `drop_table` for the others.
+    threads, use_cache, progress
+        As for `scattering_table`.
+
+    Returns
+    -------
+    ScatteringTable
+    """
     key = cache.table_key(method=method, **arguments)
     if use_cache and (table := cache.load(key)) is not None:
         return table

@@ -30,6 +30,8 @@ def works_for(field) -> str:
         return " or ".join(in_toml(choice) for choice in choices)
     if str in kinds:
         return "a string"
+    if bool in kinds:
+        return "true or false"
     if dt.datetime in kinds:
         return "a date-time with its offset, such as 2026-10-04T16:20:00+01:00"
     return f"{'a whole number' if int in kinds else 'a number'} from {field_range(field)}"
