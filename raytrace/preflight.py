@@ -84,6 +84,9 @@ def needed_bytes(scene, *, layers: bool = False) -> float:
     optics = scene.optics
     table = 2 * 8 * 2 * optics.paths * optics.bins * wavelengths_nm(optics).size
     # per block of rays a histogram of its own
+    if optics.method != "rays":
+        # aureole and glory, and rows made from orders without them
+        table *= 1.5
     tracing = 32 * 8 * 2 * optics.paths * optics.bins
     pixels = scene.camera.width_px * scene.camera.height_px
     optical = max(TABLES_AT_ONCE * table / 2, table + tracing)

@@ -137,7 +137,7 @@ def test_the_public_names():
 
 
 def test_the_public_names_of_optics():
-    names = {"ScatteringTable", "debye_series", "lorenz_mie", "scattering_table", "trace_sphere"}
+    names = {"ScatteringTable", "airy_bow", "debye_series", "lorenz_mie", "scattering_table", "trace_sphere"}
     assert names <= set(raytrace.optics.__all__) <= set(dir(raytrace.optics))
     for name in raytrace.optics.__all__:
         assert getattr(raytrace.optics, name) is not None

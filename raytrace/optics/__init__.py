@@ -1,13 +1,14 @@
-"""Light through drops: ray tracing, the sun's disc, and the scattering table that everything after it reads."""
+"""Light through drops: rays and waves, the sun's disc, and the scattering table that everything after it reads."""
 
 _WHERE = {
     "ScatteringTable": "table",
+    "airy_bow": "airy",
     "debye_series": "debye",
     "lorenz_mie": "debye",
     "scattering_table": "scattering",
     "trace_sphere": "sphere",
 }
-__all__ = ["ScatteringTable", "debye_series", "lorenz_mie", "scattering_table", "trace_sphere"]
+__all__ = ["ScatteringTable", "airy_bow", "debye_series", "lorenz_mie", "scattering_table", "trace_sphere"]
 
 
 def __getattr__(name):
