@@ -9,7 +9,7 @@ from skies import make_scene
 from raytrace.light.spectrum import illumination
 from raytrace.light.sun import direction
 from raytrace.scene.model import Ground
-from raytrace.sky.ground import land_xyz, make_cover, mean_ground_xyz
+from raytrace.sky.ground import land_xyz, make_cover, mean_ground_xyz, reflectance
 from raytrace.sky.terrain import (
     EFFECTIVE_EARTH_M,
     ground_distance,
@@ -187,6 +187,21 @@ def test_plain_ground_obeys_lamberts_law(albedo, elevation):
         land_xyz(cover, land, distance, azimuth, -EYE / distance, 1.0, np.empty(3), out)
         assert out[1] == pytest.approx(albedo * expected, rel=1e-9)
     assert mean_ground_xyz(cover)[1] == pytest.approx(albedo * expected, rel=1e-9)
+
+
+def test_clearings_of_a_forest_are_grass():
+    # dark woods send back a few per cent of light, grass about a tenth (our own scenery); nothing is black
+    scene = make_scene((40.0, 200.0), ground={"cover": "forest", "relief_m": 50.0})
+    light = illumination(scene, np.arange(380.0, 781.0, 20.0))
+    cover, land, out = plain_ground(scene, light)
+    seen = []
+    for x, y in np.mgrid[-3000.0:3000.0:97.0, -3000.0:3000.0:97.0].reshape(2, -1).T:
+        wood = reflectance(cover, land, x, y, 8.0, out)
+        seen.append((wood, out[1]))
+    wood, green = np.array(seen).T
+    assert (wood == 0.0).any() and (wood == 1.0).any()
+    assert green.min() > 0.01
+    assert green[wood == 0.0].mean() > 1.5 * green[wood == 1.0].mean()
 
 
 def plain_ground(scene, light):

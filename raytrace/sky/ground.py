@@ -93,7 +93,8 @@ def reflectance(cover, land, x, y, footprint, out):
     wood = woods(land, x, y, footprint)
     if cover.kind == 3 and wood < 1.0:
         field_crop(x, y, cover.seed, footprint, cover.crops, out)
-    elif cover.kind == 2 and wood < 1.0:
+    elif cover.kind in (2, 4) and wood < 1.0:
+        # between the woods of a forest lie clearings of grass
         wide = octaves(x / 90.0, y / 90.0, 2.5, cover.seed, 4, footprint / 90.0)
         tint = octaves(x / 400.0, y / 400.0, 5.5, cover.seed + np.uint64(9), 3, footprint / 400.0)
         shade = max(0.2, 1.0 + 0.35 * wide + 0.42 * grain(x, y, cover.seed + np.uint64(60), footprint))
