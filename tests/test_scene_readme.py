@@ -51,7 +51,7 @@ def test_the_readme_holds_every_key_with_range_and_default(table):
             assert span == "table"
         elif works.startswith(("a number from ", "a whole number from ")):
             assert span == field_range(field), key
-        elif works.startswith('"'):
+        elif works.startswith('"') or works == "true or false":
             assert span == works, key
         else:
             texts = {"time": "date-time with offset", "plate": "path of a picture", "size_table": "path of a text file"}
@@ -60,6 +60,8 @@ def test_the_readme_holds_every_key_with_range_and_default(table):
             assert default == "none", key
         elif isinstance(field.default, str):
             assert default == f'"{field.default}"', key
+        elif isinstance(field.default, bool):
+            assert default == str(field.default).lower(), key
         else:
             assert math.isclose(float(default), field.default, rel_tol=0, abs_tol=0), key
         assert meaning.endswith((".", "...")) and len(meaning) > 8, key
