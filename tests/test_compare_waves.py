@@ -10,7 +10,7 @@ from test_compare_formats import SCHEMA
 
 import raytrace
 from raytrace.comparison import plot
-from raytrace.comparison.figures import main_maximum_deg
+from raytrace.drops.bow_angle import main_maximum_deg
 from raytrace.optics import debye_series
 from raytrace.optics.table import ring_solid_angle_sr
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from raytrace.comparison.estimate import Estimate, jackknife
-from raytrace.drops.bow_angle import bow_angle, bow_ray_weight
+from raytrace.drops.bow_angle import bow_angle, bow_ray_weight, main_maximum_deg
 
 RED_NM, VIOLET_NM = 700.0, 400.0
 NAMES = {1: "primary", 2: "secondary", 3: "tertiary", 4: "quaternary"}
@@ -79,19 +79,6 @@ def edges(
         # of the deviations, which do not fold back at the antisolar point or the sun
         "colour_width_deg": abs(turned[1] - turned[0]),
     }
-
-
-def main_maximum_deg(index: float, order: int, size_parameter: float) -> float:
-    """How far a bow's main maximum stands from its ray, 1.018793 h^(1/3) x^(-2/3) (Airy 1838; van de Hulst 1957, 13.2).
-
-    Returns
-    -------
-    float
-        Angle toward the bright side [deg].
-    """
-    p2, n2 = (order + 1) ** 2, index**2
-    h = (p2 - 1) ** 2 / p2 * np.sqrt((p2 - n2) / (n2 - 1) ** 3)
-    return float(np.degrees(1.018793 * h ** (1 / 3) * size_parameter ** (-2 / 3)))
 
 
 def off_axis(curve, angle_deg, place, disc_radius_deg) -> tuple[float, float] | None:

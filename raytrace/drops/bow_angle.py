@@ -66,6 +66,28 @@ def bow_angle(index: np.ndarray, order: int) -> BowAngle:
     return BowAngle(incidence, refraction, deviation, scattering, 180.0 - scattering)
 
 
+def main_maximum_deg(index: float, order: int, size_parameter: float) -> float:
+    """How far a bow's main maximum stands from its ray, 1.018793 h^(1/3) x^(-2/3) (Airy 1838; van de Hulst 1957, 13.2).
+
+    Parameters
+    ----------
+    index : float
+        Relative to air, below order + 1.
+    order : int
+        1 primary, 2 secondary, ...
+    size_parameter : float
+        pi times the diameter over the wavelength.
+
+    Returns
+    -------
+    float
+        Angle toward the bright side [deg].
+    """
+    p2, n2 = (order + 1) ** 2, index**2
+    h = (p2 - 1) ** 2 / p2 * np.sqrt((p2 - n2) / (n2 - 1) ** 3)
+    return float(np.degrees(1.018793 * h ** (1 / 3) * size_parameter ** (-2 / 3)))
+
+
 def fresnel(cos_i: np.ndarray, index: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Share of the power that a surface reflects.
 

@@ -11,36 +11,43 @@ from functools import lru_cache
 
 import numpy as np
 
+from raytrace.drops.bow_angle import main_maximum_deg
 from raytrace.optics.fold import apply_weights
 
 _COARSEST, _LEVELS = 1125, 6
-# for many sizes: cells up to the size parameters given
-_AMONG_MANY = ((300.0, 1125), (5000.0, 2250), (np.inf, 1500))
 MANY_SIZES = 24
-_A_FRINGE = 6
-"""Points a fringe where a size stands alone."""
+_A_FRINGE, _A_MAXIMUM = 6, 5
+"""Points a fringe where a size stands alone, and a main maximum among many sizes."""
+_AMONG_MANY = (1125, 1500, 2250, 3000, 4500, 6000, 9000, 12_000, 18_000)
 
 
-def cells(size_parameter: float, sizes: int) -> int:
+def cells(size_parameter: float, sizes: int, *, lowest: int = 2, index: float = 1.333) -> int:
     """Number of cells of the grid for a drop.
 
-    Among many sizes the fine fringes cancel out and may be met at any point; what is left is as wide as the bow itself,
-    1.02 h^(1/3) x^(-2/3) for the main maximum (Airy 1838): 0.6 deg for the primary at x = 2000, and for the orders that
-    `auto` leaves to waves in larger drops, the tertiary and beyond, 0.3 deg at 20,000.
+    Among many sizes the fine fringes cancel out and may be met at any point; what is left is as wide as the bow's main
+    maximum itself.
 
     Parameters
     ----------
     size_parameter : float
     sizes : int
         How many sizes are averaged.
+    lowest : int
+        Lowest Debye order that is worked out, whose bow is the sharpest; below 2 counts as 2.
+    index : float
+        Real part, relative to air.
 
     Returns
     -------
     int
-        1125 (0.16 deg) or a power of two times it, up to 36,000 (0.005 deg); 1500 for the large among many.
+        For few sizes 1125 (0.16 deg) or a power of two times it, up to 36,000 (0.005 deg); among many up to 18,000.
     """
     if sizes >= MANY_SIZES:
-        return next(count for most, count in _AMONG_MANY if size_parameter <= most)
+        lowest = max(lowest, 2)
+        if index >= lowest:
+            lowest = int(index) + 1
+        wanted = _A_MAXIMUM * 180.0 / main_maximum_deg(index, lowest - 1, size_parameter)
+        return next((count for count in _AMONG_MANY if count >= wanted), _AMONG_MANY[-1])
     level = math.ceil(math.log2(max(size_parameter * _A_FRINGE / _COARSEST, 1.0)))
     return _COARSEST * 2 ** min(level, _LEVELS - 1)
 
@@ -107,12 +114,6 @@ class BinMeans:
         self._edges = np.asarray(angle_edges_deg, dtype=np.float64)
         self._weights = {}
 
-    def prepare(self, counts) -> None:
-        """Make the weights of some grids before several threads ask for them."""
-        for count in counts:
-            if count not in self._weights:
-                self._weights[count] = bin_weights(self._edges, count)
-
     def of(self, values: np.ndarray) -> np.ndarray:
         """Means over bins of values on a grid.
 
@@ -127,7 +128,9 @@ class BinMeans:
             0 or more: where a cubic dips below, 0 stands.
         """
         count = values.shape[-1]
-        self.prepare([count])
+        if count not in self._weights:
+            # two threads may both come here, and make the same
+            self._weights[count] = bin_weights(self._edges, count)
         start, weights = self._weights[count]
         rows = np.ascontiguousarray(values.reshape(-1, count).T)
         out = np.empty((start.size, rows.shape[1]))

@@ -76,11 +76,6 @@ class RowMaker:
         self._kept = {} if keep else None
         self._near = self.angle_deg < _NEAR_DEG
 
-    def prepare(self, nodes: SizeNodes, wavelength_nm) -> None:
-        """Make what threads share, before they start."""
-        x = _size_parameter(nodes.diameter_mm[:, None], np.asarray(wavelength_nm))
-        self._means.prepare({cells(value, self.sizes) for value in x.ravel()})
-
     def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, stop=None) -> Rows:
         """Rows of one wavelength.
 
@@ -124,7 +119,8 @@ class RowMaker:
         groups = {}
         for i in np.flatnonzero(wanted.any(axis=1)):
             orders = tuple(np.flatnonzero(wanted[i]).tolist())
-            key = cells(x[i], self.sizes), orders, bool(x[i] > _NEAR_X), bool(x[i] > _GLORY_X)
+            count = cells(x[i], self.sizes, lowest=next((p for p in orders if p > 1), self.paths), index=index.real)
+            key = count, orders, bool(x[i] > _NEAR_X), bool(x[i] > _GLORY_X)
             groups.setdefault(key, []).append(i)
         for (count, orders, coarse, large), members in sorted(groups.items()):
             mu, orders = cosines(count), list(orders)
@@ -196,7 +192,7 @@ class RowMaker:
         for i in np.flatnonzero(x <= _GLORY_X):
             if stop is not None and stop.is_set():
                 return
-            count = cells(x[i], self.sizes)
+            count = cells(x[i], self.sizes, index=index.real)
             first = int(GLORY_FROM_DEG / 180.0 * count) - 8
             total = totals.setdefault(count, np.zeros((1, 2, count)))
             part = np.zeros((1, 2, count - first))

@@ -42,7 +42,8 @@ class ScatteringTable:
     sizes : int
         How many sizes were averaged; 0 where rays made the table, for which all are alike but for absorption.
     size_error : float
-        How far the last doubling of the sizes moved the orders, as a share of each one's largest value after the disc.
+        Estimated error of the average over sizes, the largest of all orders, as a share of each one's largest value
+        after the sun's disc.
     """
 
     phase_sr: np.ndarray
