@@ -299,8 +299,8 @@ def test_the_glory_of_a_few_small_drops_among_rain():
     whole, plain = (table_of(rain, "auto", glory=glory) for glory in (True, False))
     ring = whole.solid_angle_sr[ANGLE > GLORY_FULL_DEG]
     found = whole.light_sr()[:, 0].sum(axis=0)[ANGLE > GLORY_FULL_DEG] @ ring
-    # over all angles interference takes here what it gives there; small drops are a tenth of these
-    assert found == pytest.approx(plain.light_sr()[:, 0].sum(axis=0)[ANGLE > GLORY_FULL_DEG] @ ring, rel=0.1)
+    # over all angles interference takes here what it gives there; a quarter of the drops is small enough for it
+    assert found == pytest.approx(plain.light_sr()[:, 0].sum(axis=0)[ANGLE > GLORY_FULL_DEG] @ ring, rel=0.03)
 
 
 def test_the_glory_has_a_soft_edge(fog):

@@ -24,8 +24,8 @@ OFF_AXIS_DEG = 2.0
 MOST_SIZES = 2048
 GLORY_TOLERANCE = 0.05
 """The same for the sum of all orders near the antisolar point, for a single wavelength. It needs sizes of its own:
-orders interfere in step with the size, faster than each order's own fringes. The wavelengths of a picture, whose fringes
-fall at other sizes, average that down about tenfold.
+orders interfere in step with the size, faster than each order's own fringes. The many wavelengths of a picture, whose
+fringes fall at other sizes, average that down about tenfold.
 """
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
