@@ -98,6 +98,39 @@ def test_each_wavelength_has_its_own_waves():
         assert (alone.aureole_sr[:, 0] == table.aureole_sr[:, w]).all()
 
 
+def test_sizes_that_are_too_few_are_told(monkeypatch):
+    monkeypatch.setattr("raytrace.optics.drop_table.MOST_SIZES", 16)
+    table = table_of(Normal(0.05, 0.3), "waves")
+    assert table.sizes == 17
+    assert table.size_error > SIZE_TOLERANCE
+
+
+@pytest.mark.parametrize("glory", [False, True])
+@pytest.mark.parametrize("method", ["airy", "waves", "auto"])
+@pytest.mark.parametrize(
+    ("spectrum", "index", "paths"),
+    [
+        (OneSize(1e-5), 1.333, 4),
+        (OneSize(0.002), 1.5 + 1e-3j, 1),
+        (OneSize(0.1), 1.05, 3),
+        (OneSize(2.0), 1.333 + 1e-4j, 3),
+        (Gamma(1.2, 0.02), 1.36, 5),
+        (Gamma(3.0, 0.3), 1.34 + 1e-8j, 4),
+        (Linear((0.001, 0.002, 0.05, 0.06), (1.0, 0.0, 0.0, 1.0)), 1.6, 12),
+    ],
+    ids=str,
+)
+def test_any_table_is_sound(spectrum, index, paths, method, glory):
+    """Light is finite and nowhere negative; what is told apart is no more than the whole."""
+    table = drop_table([index], [550.0], spectrum, method=method, paths=paths, bins=180, rays=1000, glory=glory)
+    rows = table.light_sr(aureole=True, polarised=True)
+    assert rows.shape == (paths + glory + 1, 2, 1, 180)
+    assert np.isfinite(rows).all() and (rows >= 0).all()
+    assert np.isfinite(table.standard_error_sr).all()
+    assert (table.aureole_sr <= table.phase_sr[0]).all()
+    assert 0 <= table.left_over[0] <= 1 and 0 <= table.absorbed[0] <= 1
+
+
 # --- energy
 
 
