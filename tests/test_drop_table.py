@@ -17,7 +17,7 @@ from wave_twins import (
     whole_sr,
 )
 
-from raytrace.drops.spectrum import Gamma, Linear, Normal, OneSize
+from raytrace.drops.spectrum import Gamma, Linear, Lognormal, Normal, OneSize
 from raytrace.optics import trace_sphere
 from raytrace.optics.diffraction import reflected_sr
 from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker
@@ -68,15 +68,28 @@ def test_three_sizes_against_a_plain_sum():
 
 
 @pytest.mark.parametrize(
-    "spectrum", [FOG, Linear((0.004, 0.01, 0.02, 0.03, 0.05), (1.0, 3.0, 0.0, 0.0, 0.5))], ids=["fog", "table"]
+    "spectrum",
+    [
+        FOG,
+        Lognormal(0.03, 0.4),
+        Normal(0.05, 0.3),
+        Normal(0.2, 0.05),
+        Linear((0.004, 0.01, 0.02, 0.03, 0.05), (1.0, 3.0, 0.0, 0.0, 0.5)),
+    ],
+    ids=lambda spectrum: type(spectrum).__name__,
 )
 def test_an_average_against_even_steps_of_the_diameter(spectrum, disc):
-    """500 sizes in even steps: nodes that are refined until 1 % must be right to 1 %, after the sun's disc."""
+    """600 sizes in even steps: nodes that are refined until 1 % must be right to 1 %, after the sun's disc.
+
+    As everywhere, p = 0 is judged without what is diffracted.
+    """
     table = table_of(spectrum, "waves")
     assert table.size_error <= SIZE_TOLERANCE
     assert 8 < table.sizes < 300
-    wanted = orders_sr(INDEX, even_sizes(spectrum, 500), EDGES, 6, inside=1)
-    found, wanted = disc(orders_of(table)), disc(wanted.sum(axis=1))
+    both = orders_of(table), orders_sr(INDEX, even_sizes(spectrum, 600), EDGES, 6, inside=1).sum(axis=1)
+    for rows in both:
+        rows[0] = np.minimum(rows[0], reflected_sr(INDEX, ANGLE).sum(axis=0))
+    found, wanted = (disc(rows) for rows in both)
     assert (farthest(found, wanted, OFF_AXIS) < SIZE_TOLERANCE).all()
 
 
@@ -278,10 +291,10 @@ def test_method_rays_is_the_tracer_and_rings():
 
 @pytest.mark.parametrize("method", ["auto", "airy", "waves"])
 def test_same_bytes_for_any_number_of_threads(method):
-    index, nm = np.array([1.339, 1.3343, 1.331]) + 1e-8j, np.array([450.0, 550.0, 650.0])
+    index, nm = np.array([1.339, 1.331]) + 1e-8j, np.array([450.0, 650.0])
     one, two = (
         drop_table(
-            index, nm, Normal(0.2, 0.2), method=method, bins=600, paths=4, rays=2000, glory=True, threads=threads
+            index, nm, Normal(0.16, 0.1), method=method, bins=600, paths=3, rays=2000, glory=True, threads=threads
         )
         for threads in (1, 2)
     )
