@@ -60,23 +60,19 @@ class RowMaker:
         "airy", "waves" or "auto".
     sizes : int
         How many sizes are averaged in the end.
-    glory : bool
-        Whether `whole_sr` is made.
     keep : bool
         Keep what Airy bows need of an index, 20 MB each, for later calls.
     """
 
-    def __init__(
-        self, angle_edges_deg, paths: int, method: str, sizes: int, *, glory: bool = False, keep: bool = False
-    ):
+    def __init__(self, angle_edges_deg, paths: int, method: str, sizes: int, *, keep: bool = False):
         self.edges_deg = np.asarray(angle_edges_deg, dtype=np.float64)
         self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
-        self.paths, self.method, self.sizes, self.glory = paths, method, sizes, glory
+        self.paths, self.method, self.sizes = paths, method, sizes
         self._means = BinMeans(self.edges_deg)
         self._kept = {} if keep else None
         self._near = self.angle_deg < _NEAR_DEG
 
-    def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, stop=None) -> Rows:
+    def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, whole=None, stop=None) -> Rows:
         """Rows of one wavelength.
 
         Parameters
@@ -86,6 +82,8 @@ class RowMaker:
         wavelength_nm : float
             In air [nm].
         nodes : SizeNodes
+        whole : SizeNodes, optional
+            Sizes for the sum of all orders; without them there is none.
         stop : threading.Event, optional
             Set by whoever wants no result any more.
 
@@ -109,10 +107,44 @@ class RowMaker:
         self._add_waves(out, index, x, weight, (chosen == WAVES) & (weight > 0), stop)
         self._add_airy(out, index, x, weight, (chosen == AIRY) & (weight > 0), stop)
         self._add_diffraction(out, index, x, weight[:, 0], chosen[:, 0] == WAVES)
-        if self.glory:
-            # the finest rule of all orders serves their sum
-            self._add_whole(out, index, x, weight[:, np.argmax((weight > 0).sum(axis=0))], stop)
+        if whole is not None:
+            share = glory_share(nodes, wavelength_nm)
+            out.whole_sr[:] += share * self.whole(index, wavelength_nm, whole, stop=stop)
         return out
+
+    def whole(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, stop=None) -> np.ndarray:
+        """All orders with their interference from GLORY_FROM_DEG on: mean of the drops that are not too large for it.
+
+        Parameters
+        ----------
+        index, wavelength_nm, stop
+            As for `rows`.
+        nodes : SizeNodes
+            With one column of weights.
+
+        Returns
+        -------
+        (2, bins) float64
+            0 where all drops are too large [sr⁻¹].
+        """
+        x = _size_parameter(nodes.diameter_mm, wavelength_nm)
+        some = (x <= _GLORY_X) & (nodes.weight[:, 0] > 0)
+        totals, out = {}, np.zeros((2, self.angle_deg.size))
+        for i in np.flatnonzero(some):
+            if stop is not None and stop.is_set():
+                break
+            count = cells(x[i], self.sizes, index=index.real)
+            first = int(GLORY_FROM_DEG / 180.0 * count) - 8
+            total = totals.setdefault(count, np.zeros((1, 2, count)))
+            part = np.zeros((1, 2, count - first))
+            mu = np.ascontiguousarray(cosines(count)[first:])
+            coefficients = whole_coefficients(index, x[i])
+            coefficients *= np.sqrt(nodes.weight[i, 0] / (2.0 * np.pi)) / x[i]
+            add_intensities(mu, coefficients, part)
+            total[:, :, first:] += part
+        for _, total in sorted(totals.items()):
+            out += self._means.of(total[0])
+        return out / nodes.weight[some, 0].sum() if some.any() else out
 
     def _add_waves(self, out, index, x, weight, wanted, stop):
         """Debye's orders: drops with the same grid and the same orders are added up before they go to the bins."""
@@ -186,23 +218,10 @@ class RowMaker:
             out.phase_sr[0] += rings
             out.aureole_sr[:] += rings
 
-    def _add_whole(self, out, index, x, weight, stop):
-        """The sum of all orders before squaring, near the antisolar point."""
-        totals = {}
-        for i in np.flatnonzero(x <= _GLORY_X):
-            if stop is not None and stop.is_set():
-                return
-            count = cells(x[i], self.sizes, index=index.real)
-            first = int(GLORY_FROM_DEG / 180.0 * count) - 8
-            total = totals.setdefault(count, np.zeros((1, 2, count)))
-            part = np.zeros((1, 2, count - first))
-            mu = np.ascontiguousarray(cosines(count)[first:])
-            coefficients = whole_coefficients(index, x[i])
-            coefficients *= np.sqrt(weight[i] / (2.0 * np.pi)) / x[i]
-            add_intensities(mu, coefficients, part)
-            total[:, :, first:] += part
-        for _, total in sorted(totals.items()):
-            out.whole_sr[:] += self._means.of(total[0])
+
+def glory_share(nodes: SizeNodes, wavelength_nm: float) -> float:
+    """Share of the cross-section in drops small enough for a glory."""
+    return float(nodes.weight[_size_parameter(nodes.diameter_mm, wavelength_nm) <= _GLORY_X, 0].sum())
 
 
 def _side_by_side(parts):

@@ -9,19 +9,24 @@ import numpy as np
 from raytrace.jit import run_all
 from raytrace.optics.airy import prepare_airy
 from raytrace.optics.angle_grids import MANY_SIZES
-from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker
+from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker, glory_share
 from raytrace.optics.fold import DiscFold
 from raytrace.optics.methods import choose
 from raytrace.optics.size_nodes import SizeNodes, refine
 from raytrace.optics.sphere import absorption_exponent, checked_arguments, trace_sphere
 from raytrace.optics.table import ScatteringTable
 
-SIZE_TOLERANCE = 0.008
-"""Doubling the sizes ends for an order when what the finer average still lacks is, by Richardson's estimate, no more than
-this share of the order's largest value after the sun's disc, farther than `OFF_AXIS_DEG` from sun and antisolar point.
+SIZE_TOLERANCE = 0.01
+"""Doubling the sizes ends for an order when it moves it by no more than this share of its largest value after the sun's
+disc, farther than `OFF_AXIS_DEG` from the sun and from the antisolar point. The finer average, nearer still, is taken.
 """
 OFF_AXIS_DEG = 2.0
 MOST_SIZES = 2048
+GLORY_TOLERANCE = 0.1
+"""The same for the sum of all orders near the antisolar point, by its own value at each angle, for a single wavelength. It
+needs sizes of its own: orders interfere in step with the size, faster than each order's own fringes. The wavelengths of a
+picture, whose fringes fall at other sizes, average that down about tenfold.
+"""
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
 _CHUNK = 8
@@ -75,13 +80,14 @@ def drop_table(
     index, wavelength = _checked(index, wavelength_nm, spectrum, method, paths, rays, bins, seed, threads)
     edges = np.linspace(0.0, 180.0, bins + 1)
     nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
-    maker = RowMaker(edges, paths, method, nodes.diameter_mm.size, glory=glory)
+    maker = RowMaker(edges, paths, method, nodes.diameter_mm.size)
+    whole_nodes = _whole_nodes(index, wavelength, spectrum, maker, nodes, threads) if glory else None
     phase, aureole = np.empty((paths, 2, wavelength.size, bins)), np.empty((2, wavelength.size, bins))
     whole, share = np.empty_like(aureole), np.empty((2, paths, wavelength.size))
     stop = threading.Event()
 
     def one_wavelength(w):
-        rows = maker.rows(index[w], wavelength[w], nodes, stop=stop)
+        rows = maker.rows(index[w], wavelength[w], nodes, whole=whole_nodes, stop=stop)
         phase[:, :, w], aureole[:, w], whole[:, w] = rows.phase_sr, rows.aureole_sr, rows.whole_sr
         share[0, :, w], share[1, :, w] = rows.rays_share, rows.rays_whole_share
 
@@ -199,10 +205,38 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
         # foci on the axis are narrow and change with each size; sun and the observer's own shadow stand there
         coarse, fine = seen(coarse)[..., off_axis], seen(fine)[..., off_axis]
         peak = fine.max(axis=-1, keepdims=True)
-        # a trapezoidal rule's error falls to a quarter with each doubling, or faster, so a third of the step is left
-        return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0), axis=(0, 2)) / 3.0
+        return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0), axis=(0, 2))
 
     return refine(spectrum, average, distance, quantities=paths, tolerance=SIZE_TOLERANCE, most_steps=MOST_SIZES)
+
+
+def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
+    """Sizes that are fine enough for the sum of all orders, at the first, the middle and the last wavelength."""
+    probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
+    disc = DiscFold(maker.edges_deg, _DISC_DEG, wavelength[probes], threads=threads)
+    seen = maker.angle_deg > GLORY_FULL_DEG
+    # where most drops are too large for a glory, the others' is a small part of what is seen
+    share = np.array([glory_share(nodes, wavelength[w]) for w in probes])
+
+    def average(nodes):
+        out = np.zeros((len(probes), maker.angle_deg.size))
+
+        def one(k, w):
+            out[k] = maker.whole(index[w], wavelength[w], nodes).sum(axis=0)
+
+        run_all(one, list(enumerate(probes)), threads=threads)
+        return out
+
+    def distance(coarse, fine):
+        coarse, fine = (
+            np.stack([disc.fold(np.ascontiguousarray(row[:, None]), k)[seen, 0] for k, row in enumerate(rows)])
+            for rows in (coarse, fine)
+        )
+        # rings are seen against what is beside them, so each angle counts by its own value
+        return [np.max(share[:, None] * np.abs(fine - coarse) / np.where(fine > 0, fine, 1.0))]
+
+    found, _ = refine(spectrum, average, distance, quantities=1, tolerance=GLORY_TOLERANCE, most_steps=MOST_SIZES)
+    return found
 
 
 def _with_glory(table: ScatteringTable, whole) -> ScatteringTable:

@@ -42,8 +42,7 @@ class ScatteringTable:
     sizes : int
         How many sizes were averaged; 0 where rays made the table, for which all are alike but for absorption.
     size_error : float
-        Estimated error of the average over sizes, the largest of all orders, as a share of each one's largest value
-        after the sun's disc.
+        How far the last doubling of the sizes moved the orders, as a share of each one's largest value after the disc.
     """
 
     phase_sr: np.ndarray
