@@ -22,10 +22,10 @@ disc, farther than `OFF_AXIS_DEG` from the sun and from the antisolar point. The
 """
 OFF_AXIS_DEG = 2.0
 MOST_SIZES = 2048
-GLORY_TOLERANCE = 0.1
-"""The same for the sum of all orders near the antisolar point, by its own value at each angle, for a single wavelength. It
-needs sizes of its own: orders interfere in step with the size, faster than each order's own fringes. The wavelengths of a
-picture, whose fringes fall at other sizes, average that down about tenfold.
+GLORY_TOLERANCE = 0.05
+"""The same for the sum of all orders near the antisolar point, for a single wavelength. It needs sizes of its own:
+orders interfere in step with the size, faster than each order's own fringes. The many wavelengths of a picture, whose
+fringes fall at other sizes, average that down about tenfold.
 """
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
@@ -232,8 +232,9 @@ def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
             np.stack([disc.fold(np.ascontiguousarray(row[:, None]), k)[seen, 0] for k, row in enumerate(rows)])
             for rows in (coarse, fine)
         )
-        # rings are seen against what is beside them, so each angle counts by its own value
-        return [np.max(share[:, None] * np.abs(fine - coarse) / np.where(fine > 0, fine, 1.0))]
+        # rings are seen against what is beside them, so each angle counts by its own value too, by half as much
+        scale = np.minimum(fine.max(axis=-1, keepdims=True), 2.0 * fine)
+        return [np.max(share[:, None] * np.abs(fine - coarse) / np.where(scale > 0, scale, 1.0))]
 
     found, _ = refine(spectrum, average, distance, quantities=1, tolerance=GLORY_TOLERANCE, most_steps=MOST_SIZES)
     return found
