@@ -13,6 +13,8 @@ BYTES_PER_PLATE_PIXEL = 40
 BYTES_PER_PIXEL = 36
 BYTES_PER_LAYER_PIXEL = 12
 TABLES_AT_ONCE = 3.2
+# What Airy bows keep of five indices at a time, and the ways from grids to bins
+WAVE_BYTES_PER_BIN = 12_000
 
 
 def preflight(scene, *, layers: bool = False, name: str = "scene", need: float | None = None) -> None:
@@ -90,6 +92,8 @@ def needed_bytes(scene, *, layers: bool = False) -> float:
     tracing = 32 * 8 * 2 * optics.paths * optics.bins
     pixels = scene.camera.width_px * scene.camera.height_px
     optical = max(TABLES_AT_ONCE * table / 2, table + tracing)
+    if optics.method != "rays":
+        optical += WAVE_BYTES_PER_BIN * optics.bins
     return FIXED_BYTES + optical + _plate_bytes(scene) + pixels * _per_pixel(scene, layers)
 
 

@@ -45,7 +45,8 @@ def scene_report(scene, *, name: str) -> str:
         lines.append((f"{title} table", "in the cache" if kept else "not made yet"))
     apart = [name for name in ("glory", "aureole") if getattr(optics, name)]
     if apart:
-        lines.append(("drawn apart", " and ".join(apart)))
+        unknown = ": rays know of neither" if optics.method == "rays" else ""
+        lines.append(("drawn apart", ("nothing" if unknown else " and ".join(apart)) + unknown))
     lines += [
         ("orders", f"p = 0 to {optics.paths - 1}: bows 1 to {optics.paths - 2}"),
         ("rays", f"{optics.rays:,} a wavelength, {wavelength.size} wavelengths, seed {optics.seed}"),
@@ -104,6 +105,8 @@ def _method_lines(scene, rain):
             "auto": f"each order by the cheapest method that is good to 1 %, at {nm:g} nm:",
         }[optics.method],
     )
+    if optics.method == "waves" and size_spectrum(rain).high_mm > 1.0:
+        yield "cost", "exact waves of drops beyond a millimetre: the first table takes minutes"
     if optics.method != "auto":
         return
     index = float(refractive_index(rain, scene.air, [nm])[0].real)
@@ -115,6 +118,11 @@ def _method_lines(scene, rain):
         chosen = choose("auto", x, optics.paths, index)[0]
         yield "sizes", ", ".join(f"p = {p} {names[m]}" for p, m in enumerate(chosen))
         return
+    if airy_from[min(2, optics.paths - 1)] == math.inf and spectrum.high_mm > 1.0:
+        yield (
+            "cost",
+            f"the index {index:.3f} is no water's, so waves serve large drops too: the first table takes minutes",
+        )
     diameter, weight = (part.ravel() for part in SizeAxis(spectrum).nodes(512))
     for p in range(optics.paths):
         start = min(rays_from[p], airy_from[p])

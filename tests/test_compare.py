@@ -229,8 +229,8 @@ def test_same_seed_same_figures_on_any_threads():
 
 def test_arguments_that_cannot_be():
     for build, told in (
-        (lambda: raytrace.Drop(diameter_mm=math.nan), "diameter_mm: nan given.*0.02 to 8"),
-        (lambda: raytrace.Drop(diameter_mm=10**400), "diameter_mm: a whole number of 1329 bits given.*0.02 to 8"),
+        (lambda: raytrace.Drop(diameter_mm=math.nan), "diameter_mm: nan given.*0.002 to 8"),
+        (lambda: raytrace.Drop(diameter_mm=10**400), "diameter_mm: a whole number of 1329 bits given.*0.002 to 8"),
         (lambda: raytrace.Drop(diameter_mm=10**5000), "diameter_mm: a whole number of 16610 bits given"),
         (lambda: raytrace.Drop(diameter_mm="1\n"), "diameter_mm: '1.*n' given"),
         (lambda: raytrace.compare("x"), "scene_or_drop: 'x' given, which is neither a scene nor a drop.*load_scene"),

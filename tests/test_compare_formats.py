@@ -202,7 +202,7 @@ def test_command_writes_all_three(tmp_path, capsys):
         (["--tolerance", "nan"], "--tolerance: nan given, which is out of range; what works: a number above 0 to 0.5"),
         (
             ["--diameter-mm", "inf"],
-            "--diameter-mm: inf given, which is out of range; what works: a number from 0.02 to 8",
+            "--diameter-mm: inf given, which is out of range; what works: a number from 0.002 to 8",
         ),
         (
             ["--temperature-c", "-3"],

@@ -16,7 +16,7 @@ MOST_RAYS = (200_000_000, 6_000_000)
 _MOST_THREADS = 1024
 # Of a drop: lowest, highest, whether the lowest is left out, whether there may be none
 DROP_RANGES = {
-    "diameter_mm": (0.02, 8.0, False, False),
+    "diameter_mm": (0.002, 8.0, False, False),
     "temperature_c": (0.0, 50.0, False, False),
     "sun_elevation_deg": (0.0, 90.0, True, True),
     "refractive_index": (1.1, 1.9, False, True),

@@ -14,7 +14,7 @@ class Drop:
     Attributes
     ----------
     diameter_mm : float
-        0.02 to 8; in ray optics it matters through absorption only [mm].
+        0.002 to 8; in ray optics it matters through absorption only [mm].
     temperature_c : float
         Of the water, 0 to 50 [degC].
     sun_elevation_deg : float or None

@@ -115,7 +115,10 @@ def _made(report) -> str:
         "waves": "Exact waves for each size of drops; what is diffracted round them is left out.",
         "auto": "Rays, Airy bows or exact waves for each size of drops and each order, whichever is good to 1 %.",
     }[method]
-    return how + " Errors are those of what rays serve; elsewhere there is none to tell."
+    return how + (
+        " Orders are added without their interference, so there is no glory. Errors are those of what rays serve; "
+        "elsewhere there is none to tell."
+    )
 
 
 def _missed(report) -> str:

@@ -16,7 +16,14 @@ from raytrace.jit import run_all
 from raytrace.light.spectrum import before_loading_beside, illumination
 from raytrace.light.sun import antisolar
 from raytrace.optics.scattering import scattering_table, wavelengths_nm
-from raytrace.sky.radiance import layer_names, layered_radiance, order_xyz, prepare_view, with_sky_illuminance
+from raytrace.sky.radiance import (
+    draws,
+    layer_names,
+    layered_radiance,
+    order_xyz,
+    prepare_view,
+    with_sky_illuminance,
+)
 
 _STRIP_PIXELS = 131_072
 _DEVELOP_PIXELS = 65_536
@@ -72,7 +79,7 @@ def render(
                 table,
                 light.direct_normal,
                 scene.sun.disc_diameter_deg,
-                aureole=scene.optics.aureole,
+                aureole=draws(scene.optics, "aureole"),
                 threads=threads,
             )
         )

@@ -18,10 +18,13 @@ GLORY_FROM_DEG, GLORY_FULL_DEG = 162.0, 166.0
 """Where the exact sum begins to stand for the orders, and from where it does so alone [deg]."""
 _GLORY_X = 3000.0
 """Larger drops have glories smaller than 0.1 deg, which the sun's disc hides; their orders are added up."""
-_SMALLEST_X = 0.02
+_SMALLEST_X, _LARGEST_X = 0.02, 1e6
+WHOLE_X = 50.0
+"""In smaller drops the orders' interference does not average out: what they add up to is scaled to the exact sum."""
 _ROWS_AT_ONCE = 8
-# closer to the sun than this, grids are too coarse for what large drops diffract
-_NEAR_DEG, _NEAR_X = 3.0, 1500.0
+# Closer to the sun than this, order p = 0 gets a grid as fine as diffracted rings are, for drops up to the size whose
+# rings the finest grid holds
+_NEAR_DEG, _RINGS_X = 15.0, 12_000.0
 
 
 class Rows(NamedTuple):
@@ -62,14 +65,19 @@ class RowMaker:
         How many sizes are averaged in the end.
     keep : bool
         Keep what Airy bows need of an index, 20 MB each, for later calls.
+    scaled : bool
+        Whether the orders of small drops are scaled to the exact sum.
     """
 
-    def __init__(self, angle_edges_deg, paths: int, method: str, sizes: int, *, keep: bool = False):
+    def __init__(
+        self, angle_edges_deg, paths: int, method: str, sizes: int, *, keep: bool = False, scaled: bool = True
+    ):
         self.edges_deg = np.asarray(angle_edges_deg, dtype=np.float64)
         self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
         self.paths, self.method, self.sizes = paths, method, sizes
         self._means = BinMeans(self.edges_deg)
         self._kept = {} if keep else None
+        self._scaled = scaled and method != "airy"
         self._near = self.angle_deg < _NEAR_DEG
 
     def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, whole=None, stop=None) -> Rows:
@@ -93,7 +101,7 @@ class RowMaker:
             Their weights are those of `nodes`, a column an order.
         """
         bins = self.angle_deg.size
-        x = _size_parameter(nodes.diameter_mm, wavelength_nm)
+        x = size_parameter(nodes.diameter_mm, wavelength_nm)
         chosen = choose(self.method, x, self.paths, index.real)
         weight = nodes.weight
         by_rays = weight * (chosen == RAYS)
@@ -127,7 +135,7 @@ class RowMaker:
         (2, bins) float64
             0 where all drops are too large [sr⁻¹].
         """
-        x = _size_parameter(nodes.diameter_mm, wavelength_nm)
+        x = size_parameter(nodes.diameter_mm, wavelength_nm)
         some = (x <= _GLORY_X) & (nodes.weight[:, 0] > 0)
         totals, out = {}, np.zeros((2, self.angle_deg.size))
         for i in np.flatnonzero(some):
@@ -150,11 +158,13 @@ class RowMaker:
         """Debye's orders: drops with the same grid and the same orders are added up before they go to the bins."""
         groups = {}
         for i in np.flatnonzero(wanted.any(axis=1)):
+            if x[i] < WHOLE_X and self._scaled:
+                self._add_small(out, index, x[i], weight[i])
+                continue
             orders = tuple(np.flatnonzero(wanted[i]).tolist())
             count = cells(x[i], self.sizes, lowest=next((p for p in orders if p > 1), self.paths), index=index.real)
-            key = count, orders, bool(x[i] > _NEAR_X), bool(x[i] > _GLORY_X)
-            groups.setdefault(key, []).append(i)
-        for (count, orders, coarse, large), members in sorted(groups.items()):
+            groups.setdefault((count, orders, bool(x[i] > _GLORY_X)), []).append(i)
+        for (count, orders, large), members in sorted(groups.items()):
             mu, orders = cosines(count), list(orders)
             row_of = np.full(self.paths, -1)
             row_of[orders] = np.arange(len(orders))
@@ -172,7 +182,7 @@ class RowMaker:
                 add_intensities(mu, _side_by_side(parts), total[: len(some) * len(orders)])
             total = total.reshape(at_once, len(orders), 2, count).sum(axis=0)
             added = self._means.of(total)
-            if coarse and orders[0] == 0:
+            if orders[0] == 0 and count < cells(x[members].max(), 1):
                 added[0][:, self._near] = self._near_the_sun(index, x[members], weight[members, 0])
             out.phase_sr[orders] += added
             if large:
@@ -203,11 +213,38 @@ class RowMaker:
             self._kept[index, paths] = prepare_airy(index, self.edges_deg, paths)
         return self._kept[index, paths]
 
+    def _add_small(self, out, index, x, weight):
+        """One small drop: its orders, scaled at each angle so that they add up to the exact sum."""
+        count = cells(x, 1)
+        mu = cosines(count)
+        orders, whole = np.zeros((self.paths, 2, count)), np.zeros((1, 2, count))
+        add_intensities(mu, order_coefficients(index, x, np.arange(self.paths)), orders)
+        add_intensities(mu, whole_coefficients(index, x), whole)
+        total = orders.sum(axis=0)
+        orders *= whole[0] / np.where(total > 0.0, total, 1.0) / (2.0 * np.pi * x**2)
+        out.phase_sr[:] += self._means.of(orders) * weight[:, None, None]
+
     def _near_the_sun(self, index, x, weight):
-        """(2, near bins) order p = 0 of large drops: rings of their own there, finer than the grid, and reflection."""
-        edges = self.edges_deg[: int(self._near.sum()) + 1]
-        rings = sum(w * diffracted_sr(one, edges) for one, w in zip(x, weight, strict=True))
-        return rings + weight.sum() * reflected_sr(index.real, self.angle_deg[self._near])
+        """(2, near bins) order p = 0 of drops on grids that hold their rings; of the largest, rings and reflection."""
+        out = np.zeros((2, int(self._near.sum())))
+        if not out.size:
+            return out
+        totals, row_of = {}, np.zeros(1, dtype=np.int64)
+        for one, w in zip(x, weight, strict=True):
+            if one > _RINGS_X:
+                out += w * diffracted_sr(one, self.edges_deg[: out.shape[1] + 1])
+                out += w * reflected_sr(index.real, self.angle_deg[self._near])
+                continue
+            count = cells(one, 1)
+            last = min(int(count * (self.edges_deg[out.shape[1]] / 180.0)) + 8, count)
+            part = np.zeros((1, 2, last))
+            coefficients = order_coefficients(index, one, row_of)
+            coefficients *= np.sqrt(w / (2.0 * np.pi)) / one
+            add_intensities(np.ascontiguousarray(cosines(count)[:last]), coefficients, part)
+            totals.setdefault(count, np.zeros((1, 2, count)))[:, :, :last] += part
+        for _, total in sorted(totals.items()):
+            out += self._means.of(total[0])[:, self._near]
+        return out
 
     def _add_diffraction(self, out, index, x, weight, waves):
         """Tell apart what of p = 0 is diffracted, and add it for drops whose p = 0 rays serve."""
@@ -221,7 +258,7 @@ class RowMaker:
 
 def glory_share(nodes: SizeNodes, wavelength_nm: float) -> float:
     """Share of the cross-section in drops small enough for a glory."""
-    return float(nodes.weight[_size_parameter(nodes.diameter_mm, wavelength_nm) <= _GLORY_X, 0].sum())
+    return float(nodes.weight[size_parameter(nodes.diameter_mm, wavelength_nm) <= _GLORY_X, 0].sum())
 
 
 def _side_by_side(parts):
@@ -236,5 +273,6 @@ def _side_by_side(parts):
     return out
 
 
-def _size_parameter(diameter_mm, wavelength_nm):
-    return np.maximum(np.pi * diameter_mm * 1e6 / wavelength_nm, _SMALLEST_X)
+def size_parameter(diameter_mm, wavelength_nm):
+    """x = pi diameter / wavelength, kept within what the methods reach."""
+    return np.clip(np.pi * diameter_mm * 1e6 / wavelength_nm, _SMALLEST_X, _LARGEST_X)

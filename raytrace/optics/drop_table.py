@@ -9,10 +9,17 @@ import numpy as np
 from raytrace.jit import run_all
 from raytrace.optics.airy import prepare_airy
 from raytrace.optics.angle_grids import MANY_SIZES
-from raytrace.optics.drop_rows import GLORY_FROM_DEG, GLORY_FULL_DEG, RowMaker, glory_share
+from raytrace.optics.drop_rows import (
+    GLORY_FROM_DEG,
+    GLORY_FULL_DEG,
+    WHOLE_X,
+    RowMaker,
+    glory_share,
+    size_parameter,
+)
 from raytrace.optics.fold import DiscFold
 from raytrace.optics.methods import choose
-from raytrace.optics.size_nodes import SizeNodes, refine
+from raytrace.optics.size_nodes import SizeAxis, SizeNodes, refine
 from raytrace.optics.sphere import absorption_exponent, checked_arguments, trace_sphere
 from raytrace.optics.table import ScatteringTable
 
@@ -29,7 +36,8 @@ fringes fall at other sizes, average that down about tenfold.
 """
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
-_CHUNK = 8
+_CHUNK, _PIECES = 8, 4
+_SMALL_SHARE = 0.3
 
 
 def drop_table(
@@ -172,25 +180,28 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
     middle = 0.5 * (edges[1:] + edges[:-1])
     off_axis = (middle > OFF_AXIS_DEG) & (middle < 180.0 - OFF_AXIS_DEG)
     # averages of few sizes are made on the grids of many, so that all rules see the same
-    maker = RowMaker(edges, paths, method, MANY_SIZES, keep=True)
+    maker = RowMaker(edges, paths, method, MANY_SIZES, keep=True, scaled=_mostly_small(spectrum, wavelength))
     # what rays bring is the same for all sizes; they serve at most p = 0 and 1, whose rays are known in closed form
     traced = [prepare_airy(index[w], edges, min(paths, 2)).ray_phase_sr.sum(axis=1) for w in probes]
 
     def average(nodes):
         pieces = range(0, nodes.diameter_mm.size, _CHUNK)
-        found = {}
-
-        def one(w, first):
-            some = SizeNodes(*(part[first : first + _CHUNK] for part in nodes))
-            found[w, first] = maker.rows(index[w], wavelength[w], some)
-
-        run_all(one, [(w, first) for w in probes for first in pieces], threads=threads)
         out = np.zeros((len(probes), paths, edges.size - 1))
-        for k, w in enumerate(probes):
-            for first in pieces:
-                rows = found[w, first]
-                out[k] += rows.phase_sr.sum(axis=1)
-                out[k, : len(traced[k])] += rows.rays_share[: len(traced[k]), None] * traced[k]
+        # a few pieces at a time, so that memory does not grow with the number of sizes
+        for start in range(0, len(pieces), _PIECES):
+            some_pieces, found = pieces[start : start + _PIECES], {}
+
+            def one(w, first, found=found):
+                some = SizeNodes(*(part[first : first + _CHUNK] for part in nodes))
+                rows = maker.rows(index[w], wavelength[w], some)
+                found[w, first] = rows.phase_sr.sum(axis=1), rows.rays_share
+
+            run_all(one, [(w, first) for w in probes for first in some_pieces], threads=threads)
+            for k, w in enumerate(probes):
+                for first in some_pieces:
+                    light, share = found[w, first]
+                    out[k] += light
+                    out[k, : len(traced[k])] += share[: len(traced[k]), None] * traced[k]
         return out
 
     def seen(rows):
@@ -207,7 +218,24 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
         peak = fine.max(axis=-1, keepdims=True)
         return np.max(np.abs(fine - coarse) / np.where(peak > 0, peak, 1.0), axis=(0, 2))
 
-    return refine(spectrum, average, distance, quantities=paths, tolerance=SIZE_TOLERANCE, most_steps=MOST_SIZES)
+    # what is diffracted has rings of its own, finer than any order's fringes
+    return refine(
+        spectrum,
+        average,
+        distance,
+        quantities=paths,
+        tolerance=SIZE_TOLERANCE,
+        most_steps=MOST_SIZES,
+        finest=(0,),
+    )
+
+
+def _mostly_small(spectrum, wavelength) -> bool:
+    """Whether so many drops are small that the sizes must be fine enough for the interference of their orders."""
+    if spectrum.low_mm == spectrum.high_mm:
+        return False
+    diameter, weight = (part.ravel() for part in SizeAxis(spectrum).nodes(256))
+    return weight[size_parameter(diameter, wavelength.mean()) < WHOLE_X].sum() > _SMALL_SHARE
 
 
 def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):

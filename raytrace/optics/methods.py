@@ -9,8 +9,10 @@ from raytrace.data import read_table
 METHODS = ("rays", "airy", "waves", "auto")
 RAYS, AIRY, WAVES = range(3)
 NAMES = ("rays", "airy", "waves")
-MEASURED_INDEX = (1.32, 1.36)
-"""Range of the index, water's, for which the switch-over is measured."""
+MEASURED_INDEX = (1.32, 1.353)
+"""Range of the index, water's, for which the switch-over holds; it is measured at 1.3343 and checked at the ends."""
+MOST_WAVES_X = 100_000.0
+"""Larger drops, of 14 mm and more, are left to rays and Airy bows by all methods: the Debye series ends here."""
 
 
 def choose(method: str, size_parameter, paths: int, index: float) -> np.ndarray:
@@ -45,9 +47,15 @@ def choose(method: str, size_parameter, paths: int, index: float) -> np.ndarray:
     p = np.arange(paths)
     if method == "auto":
         rays_from, airy_from = switch_over(paths, index)
-        return np.where(x >= rays_from, RAYS, np.where(x >= airy_from, AIRY, WAVES)).astype(np.int8)
+        chosen = np.where(x >= rays_from, RAYS, np.where(x >= airy_from, AIRY, WAVES))
+        return _within_reach(chosen, x, p)
     whole = {"rays": np.full(paths, RAYS), "airy": np.where(p < 2, RAYS, AIRY), "waves": np.full(paths, WAVES)}[method]
-    return np.repeat(whole[None, :], x.size, axis=0).astype(np.int8)
+    return _within_reach(np.repeat(whole[None, :], x.size, axis=0), x, p)
+
+
+def _within_reach(chosen, x, p):
+    too_large = (chosen == WAVES) & (x > MOST_WAVES_X)
+    return np.where(too_large, np.where(p < 2, RAYS, AIRY), chosen).astype(np.int8)
 
 
 def switch_over(paths: int, index: float) -> tuple[np.ndarray, np.ndarray]:

@@ -20,6 +20,8 @@ import numpy as np
 
 from raytrace.jit import kernel
 
+# beyond, a wave does not enter the drop at all; its ratio must not grow until it overflows
+_ENDLESS = 1e150
 GROUP = 8
 """Partial waves that the angular sums take at a time; coefficients are filled up with zeros to whole groups."""
 
@@ -130,7 +132,8 @@ def debye_coefficients(index, x, terms, row_of, inner, coefficients):
     for n in range(1, terms + 1):
         step = n / y
         in_1 = 1.0 / (step - in_1) - step
-        u *= (inner[n] + step) / (in_1 + step)
+        if abs(u) < _ENDLESS:
+            u *= (inner[n] + step) / (in_1 + step)
         if abs(u) <= 1.0:
             down = 1.0 / (2.0 - u)
             shrink = u * down

@@ -86,7 +86,7 @@ class SizeAxis:
 
 
 def refine(
-    spectrum, average, distance, *, quantities: int, tolerance: float, most_steps: int
+    spectrum, average, distance, *, quantities: int, tolerance: float, most_steps: int, finest: tuple[int, ...] = ()
 ) -> tuple[SizeNodes, np.ndarray]:
     """Nodes that are fine enough for what is averaged, each quantity for itself.
 
@@ -102,6 +102,8 @@ def refine(
         Doubling ends for a quantity when the last doubling moved it by no more; the finer rule is taken.
     most_steps : int
         Doubling ends at the latest here.
+    finest : tuple of int
+        Quantities that take the finest rule of all, whatever moves them.
 
     Returns
     -------
@@ -123,4 +125,5 @@ def refine(
         fresh = (settled == 0) & ((now <= tolerance) | (2 * steps > most_steps))
         settled[fresh], moved[fresh] = steps, now[fresh]
         if settled.all():
+            settled[list(finest)] = settled.max()
             return axis.nested(settled.tolist()), moved

@@ -82,7 +82,7 @@ def _rows(text: str) -> tuple[tuple[float, ...], tuple[float, ...]]:
     for line, (before, after) in zip(lines[1:], itertools.pairwise(rows), strict=True):
         if after[0] <= before[0] * (1.0 + LEAST_STEP):
             works = "diameters that rise, each by a millionth or more"
-            raise _Wrong(f"has in line {line} {after[0]:g} mm after {before[0]:g} mm", works)
+            raise _Wrong(f"has in line {line} {after[0]:.9g} mm after {before[0]:.9g} mm", works)
     diameter, number = (tuple(column) for column in zip(*rows, strict=True))
     if max(number) == 0.0:
         raise _Wrong(f"has no drops up to its last row, line {lines[-1]}", "a number above 0 in one row or more")

@@ -34,9 +34,12 @@ def layer_names(optics) -> list[str]:
     """
     names = ["sky", "sun", "cloud", "ground", "veil", "skylit_rain", "external", "straight"]
     names += [f"order{k}" for k in range(1, optics.paths - 1)]
-    # rays know of no glory
-    has_glory = optics.glory and optics.method != "rays"
-    return names + ["glory"] * has_glory + ["aureole"] * optics.aureole
+    return names + [name for name in ("glory", "aureole") if draws(optics, name)]
+
+
+def draws(optics, name: str) -> bool:
+    """Whether the scene's optics draw the `glory` or the `aureole`: asked for, and not by rays, which know neither."""
+    return getattr(optics, name) and optics.method != "rays"
 
 
 def with_sky_illuminance(scene, light: Illumination) -> Illumination:
