@@ -71,7 +71,7 @@ WRONG = {
     "tiny diameter": ("1e-5 2\n", "has 1e-05 mm in line 1, which is out of range", "from 0.0001 to 30 mm"),
     "huge diameter": ("1 2\n31 2\n", "has 31 mm in line 2, which is out of range", "from 0.0001 to 30 mm"),
     "falling": ("1 2\n# a\n3 2\n2 2\n", "has in line 4 2 mm after 3 mm", "diameters that rise"),
-    "hardly rising": ("1 2\n1.0000001 3\n", "has in line 2 1 mm after 1 mm", "by a millionth or more"),
+    "hardly rising": ("1 2\n1.0000001 3\n", "has in line 2 1.0000001 mm after 1 mm", "by a millionth or more"),
     "twice": ("1 2\n1 3\n", "has in line 2 1 mm after 1 mm", "diameters that rise"),
     "no drops": ("1 0\n2 0.0\n", "has no drops up to its last row, line 2", "a number above 0"),
     "too many rows": ("1 1\n" * 2001, "has more than 2000 rows (line 2001)", "up to 2000 rows"),

@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from raytrace.optics import debye_series, lorenz_mie
+from raytrace.optics.drop_rows import WHOLE_X
 
 INDEX, WAVELENGTH_NM = 1.3343, 550.0
 """Water at 20 degC, to four decimals."""
@@ -34,24 +35,38 @@ def _points(edges_deg, inside):
     return angle, ring / ring.sum(axis=1, keepdims=True)
 
 
-def _mean(amplitudes, sizes, edges_deg, inside, wavelength_nm):
+def _mean(light, sizes, edges_deg, inside, wavelength_nm):
     angle, ring = _points(edges_deg, inside)
     out = 0.0
     for diameter, share in zip(*sizes, strict=True):
         x = size_parameter(diameter, wavelength_nm)
-        light = np.abs(amplitudes(x, angle.ravel())) ** 2 / (2 * math.pi * x**2)
-        out = out + share * (light.reshape(*light.shape[:-1], *angle.shape) * ring).sum(axis=-1)
+        here = light(x, angle.ravel()) / (2 * math.pi * x**2)
+        out = out + share * (here.reshape(*here.shape[:-1], *angle.shape) * ring).sum(axis=-1)
     return out
 
 
 def orders_sr(index, sizes, edges_deg, paths, *, inside=4, wavelength_nm=WAVELENGTH_NM):
-    """(paths, 2, bins) Debye orders of drops, whose (diameters, shares) are given [sr-1]."""
-    return _mean(lambda x, t: debye_series(index, x, t, paths=paths), sizes, edges_deg, inside, wavelength_nm)
+    """(paths, 2, bins) Debye orders of drops, whose (diameters, shares) are given [sr-1].
+
+    In drops of a few wavelengths they are scaled so that they add up to the exact sum.
+    """
+
+    def light(x, angle):
+        orders = np.abs(debye_series(index, x, angle, paths=paths)) ** 2
+        # one size by itself changes at once, many over a passage
+        u = np.clip((x / WHOLE_X - 0.8) / 0.4, 0.0, 1.0) if len(sizes[0]) > 9 else float(x >= WHOLE_X)
+        large = u * u * (3 - 2 * u)
+        if large == 1:
+            return orders
+        scaled = orders * np.abs(lorenz_mie(index, x, angle)) ** 2 / orders.sum(axis=0)
+        return large * orders + (1 - large) * scaled
+
+    return _mean(light, sizes, edges_deg, inside, wavelength_nm)
 
 
 def whole_sr(index, sizes, edges_deg, *, inside=4, wavelength_nm=WAVELENGTH_NM):
     """(2, bins) all orders in one, with their interference [sr-1]."""
-    return _mean(lambda x, t: lorenz_mie(index, x, t), sizes, edges_deg, inside, wavelength_nm)
+    return _mean(lambda x, t: np.abs(lorenz_mie(index, x, t)) ** 2, sizes, edges_deg, inside, wavelength_nm)
 
 
 class Disc:

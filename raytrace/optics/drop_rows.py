@@ -20,7 +20,11 @@ _GLORY_X = 3000.0
 """Larger drops have glories smaller than 0.1 deg, which the sun's disc hides; their orders are added up."""
 _SMALLEST_X, _LARGEST_X = 0.02, 1e6
 WHOLE_X = 50.0
-"""In smaller drops the orders' interference does not average out: what they add up to is scaled to the exact sum."""
+"""In smaller drops the orders' interference does not average out: what they add up to is scaled to the exact sum. Among
+many sizes the one passes into the other over a fifth of this to each side, and the smaller have sizes of their own, as
+their ripples ask for.
+"""
+_PASSAGE, _SMALL_SIZES, _NO_SHARE = 0.2, 128, 1e-4
 _ROWS_AT_ONCE = 8
 # Closer to the sun than this, order p = 0 gets a grid as fine as diffracted rings are, for drops up to the size whose
 # rings the finest grid holds
@@ -67,10 +71,20 @@ class RowMaker:
         Keep what Airy bows need of an index, 20 MB each, for later calls.
     scaled : bool
         Whether the orders of small drops are scaled to the exact sum.
+    spectrum : SizeSpectrum, optional
+        Where the nodes stand for a spectrum: it gives the small drops sizes of their own.
     """
 
     def __init__(
-        self, angle_edges_deg, paths: int, method: str, sizes: int, *, keep: bool = False, scaled: bool = True
+        self,
+        angle_edges_deg,
+        paths: int,
+        method: str,
+        sizes: int,
+        *,
+        keep: bool = False,
+        scaled: bool = True,
+        spectrum=None,
     ):
         self.edges_deg = np.asarray(angle_edges_deg, dtype=np.float64)
         self.angle_deg = 0.5 * (self.edges_deg[1:] + self.edges_deg[:-1])
@@ -78,6 +92,8 @@ class RowMaker:
         self._means = BinMeans(self.edges_deg)
         self._kept = {} if keep else None
         self._scaled = scaled and method != "airy"
+        several = spectrum is not None and spectrum.low_mm < spectrum.high_mm
+        self._spectrum = spectrum if self._scaled and several else None
         self._near = self.angle_deg < _NEAR_DEG
 
     def rows(self, index: complex, wavelength_nm: float, nodes: SizeNodes, *, whole=None, stop=None) -> Rows:
@@ -112,7 +128,10 @@ class RowMaker:
             by_rays.sum(axis=0),
             by_rays[x > _GLORY_X].sum(axis=0),
         )
-        self._add_waves(out, index, x, weight, (chosen == WAVES) & (weight > 0), stop)
+        waves = weight
+        if self._spectrum is not None and self._add_small_sizes(out, index, wavelength_nm):
+            waves = weight * _passage(x)[:, None]
+        self._add_waves(out, index, x, waves, (chosen == WAVES) & (waves > 0), stop)
         self._add_airy(out, index, x, weight, (chosen == AIRY) & (weight > 0), stop)
         self._add_diffraction(out, index, x, weight[:, 0], chosen[:, 0] == WAVES)
         if whole is not None:
@@ -158,8 +177,8 @@ class RowMaker:
         """Debye's orders: drops with the same grid and the same orders are added up before they go to the bins."""
         groups = {}
         for i in np.flatnonzero(wanted.any(axis=1)):
-            if x[i] < WHOLE_X and self._scaled:
-                self._add_small(out, index, x[i], weight[i])
+            if x[i] < WHOLE_X and self._scaled and self._spectrum is None:
+                out.phase_sr[:] += self._means.of(self._scaled_orders(index, x[i])) * weight[i][:, None, None]
                 continue
             orders = tuple(np.flatnonzero(wanted[i]).tolist())
             count = cells(x[i], self.sizes, lowest=next((p for p in orders if p > 1), self.paths), index=index.real)
@@ -213,16 +232,31 @@ class RowMaker:
             self._kept[index, paths] = prepare_airy(index, self.edges_deg, paths)
         return self._kept[index, paths]
 
-    def _add_small(self, out, index, x, weight):
-        """One small drop: its orders, scaled at each angle so that they add up to the exact sum."""
-        count = cells(x, 1)
-        mu = cosines(count)
-        orders, whole = np.zeros((self.paths, 2, count)), np.zeros((1, 2, count))
+    def _add_small_sizes(self, out, index, wavelength_nm) -> bool:
+        """Small drops of the spectrum, in even steps of the diameter; whether there are any to speak of."""
+        last = WHOLE_X * (1.0 + _PASSAGE) * wavelength_nm * 1e-6 / np.pi
+        low, high = self._spectrum.low_mm, min(self._spectrum.high_mm, last)
+        if high <= low:
+            return False
+        step = (high - low) / _SMALL_SIZES
+        diameter = low + (np.arange(_SMALL_SIZES) + 0.5) * step
+        x = size_parameter(diameter, wavelength_nm)
+        share = self._spectrum.density_per_mm(diameter) * step * (1.0 - _passage(x))
+        if share.sum() < _NO_SHARE:
+            return False
+        # all have the coarsest grid
+        light = sum(w * self._scaled_orders(index, one) for one, w in zip(x, share, strict=True) if w > 0.0)
+        out.phase_sr[:] += self._means.of(light)
+        return True
+
+    def _scaled_orders(self, index, x):
+        """(paths, 2, cells) orders of one small drop, scaled at each angle so that they add up to the exact sum."""
+        mu = cosines(cells(x, 1))
+        orders, whole = np.zeros((self.paths, 2, mu.size)), np.zeros((1, 2, mu.size))
         add_intensities(mu, order_coefficients(index, x, np.arange(self.paths)), orders)
         add_intensities(mu, whole_coefficients(index, x), whole)
         total = orders.sum(axis=0)
-        orders *= whole[0] / np.where(total > 0.0, total, 1.0) / (2.0 * np.pi * x**2)
-        out.phase_sr[:] += self._means.of(orders) * weight[:, None, None]
+        return orders * (whole[0] / np.where(total > 0.0, total, 1.0) / (2.0 * np.pi * x**2))
 
     def _near_the_sun(self, index, x, weight):
         """(2, near bins) order p = 0 of drops on grids that hold their rings; of the largest, rings and reflection."""
@@ -271,6 +305,12 @@ def _side_by_side(parts):
         out[: len(part), column : column + part.shape[1]] = part
         column += part.shape[1]
     return out
+
+
+def _passage(x):
+    """0 for small drops, 1 for large ones, smooth between."""
+    u = np.clip((x / WHOLE_X - 1.0 + _PASSAGE) / (2.0 * _PASSAGE), 0.0, 1.0)
+    return u * u * (3.0 - 2.0 * u)
 
 
 def size_parameter(diameter_mm, wavelength_nm):

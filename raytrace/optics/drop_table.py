@@ -12,14 +12,12 @@ from raytrace.optics.angle_grids import MANY_SIZES
 from raytrace.optics.drop_rows import (
     GLORY_FROM_DEG,
     GLORY_FULL_DEG,
-    WHOLE_X,
     RowMaker,
     glory_share,
-    size_parameter,
 )
 from raytrace.optics.fold import DiscFold
 from raytrace.optics.methods import choose
-from raytrace.optics.size_nodes import SizeAxis, SizeNodes, refine
+from raytrace.optics.size_nodes import SizeNodes, refine
 from raytrace.optics.sphere import absorption_exponent, checked_arguments, trace_sphere
 from raytrace.optics.table import ScatteringTable
 
@@ -37,7 +35,6 @@ fringes fall at other sizes, average that down about tenfold.
 _DISC_DEG = 0.533
 # sizes a task of the search for the nodes
 _CHUNK, _PIECES = 8, 4
-_SMALL_SHARE = 0.3
 
 
 def drop_table(
@@ -88,7 +85,7 @@ def drop_table(
     index, wavelength = _checked(index, wavelength_nm, spectrum, method, paths, rays, bins, seed, threads)
     edges = np.linspace(0.0, 180.0, bins + 1)
     nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
-    maker = RowMaker(edges, paths, method, nodes.diameter_mm.size)
+    maker = RowMaker(edges, paths, method, nodes.diameter_mm.size, spectrum=spectrum)
     whole_nodes = _whole_nodes(index, wavelength, spectrum, maker, nodes, threads) if glory else None
     phase, aureole = np.empty((paths, 2, wavelength.size, bins)), np.empty((2, wavelength.size, bins))
     whole, share = np.empty_like(aureole), np.empty((2, paths, wavelength.size))
@@ -180,7 +177,7 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
     middle = 0.5 * (edges[1:] + edges[:-1])
     off_axis = (middle > OFF_AXIS_DEG) & (middle < 180.0 - OFF_AXIS_DEG)
     # averages of few sizes are made on the grids of many, so that all rules see the same
-    maker = RowMaker(edges, paths, method, MANY_SIZES, keep=True, scaled=_mostly_small(spectrum, wavelength))
+    maker = RowMaker(edges, paths, method, MANY_SIZES, keep=True, scaled=False)
     # what rays bring is the same for all sizes; they serve at most p = 0 and 1, whose rays are known in closed form
     traced = [prepare_airy(index[w], edges, min(paths, 2)).ray_phase_sr.sum(axis=1) for w in probes]
 
@@ -228,14 +225,6 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
         most_steps=MOST_SIZES,
         finest=(0,),
     )
-
-
-def _mostly_small(spectrum, wavelength) -> bool:
-    """Whether so many drops are small that the sizes must be fine enough for the interference of their orders."""
-    if spectrum.low_mm == spectrum.high_mm:
-        return False
-    diameter, weight = (part.ravel() for part in SizeAxis(spectrum).nodes(256))
-    return weight[size_parameter(diameter, wavelength.mean()) < WHOLE_X].sum() > _SMALL_SHARE
 
 
 def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
