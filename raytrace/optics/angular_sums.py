@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from raytrace.jit import kernel
+from raytrace.jit import aligned, kernel
 
 ANGLES = 96
 """Angles a block."""
@@ -20,14 +20,6 @@ _U1, _U2, _U3, _U4, _U5, _U6, _U7, _U8, _U9, _U10, _U11, _U12, _U13, _U14, _U15 
 # numbers a row (an order) takes in the coefficients of a group, and in the sums
 _ROW_C, _HALF_C = np.uint64(32), np.uint64(16)
 _ROW_S, _HALF_S = np.uint64(4 * ANGLES), np.uint64(2 * ANGLES)
-
-
-@kernel
-def aligned(count):
-    """(count,) float64 that begins on a cache line; vectors of eight numbers that lie across two lines are slow."""
-    room = np.empty(count + 8)
-    first = (64 - room.ctypes.data % 64) % 64 // 8
-    return room[first : first + count]
 
 
 @kernel(inline=True)

@@ -14,7 +14,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from raytrace.jit import kernel
+from raytrace.jit import aligned, kernel
 from raytrace.random_stream import uniform
 
 CHUNK = 128
@@ -92,11 +92,11 @@ def trace_sphere_block(block, hist, balance):
     inverse_n = 1.0 / n
     # unsigned, since a signed index would be tested for counting from the end at each use
     first = np.empty(CHUNK, np.uint64)
-    x = np.empty(CHUNK)
-    step = np.empty(CHUNK)
-    r_s = np.empty(CHUNK)
-    r_p = np.empty(CHUNK)
-    chord = np.empty(CHUNK)
+    x = aligned(CHUNK)
+    step = aligned(CHUNK)
+    r_s = aligned(CHUNK)
+    r_p = aligned(CHUNK)
+    chord = aligned(CHUNK)
     bin_of = np.empty((paths, CHUNK), np.uint64)
     for start in range(0, rays, CHUNK):
         m = min(CHUNK, rays - start)
