@@ -90,6 +90,7 @@ def _method_lines(scene, rain):
     """Which sizes of drops use which method, by order, at 550 nm."""
     import math
 
+    from raytrace.drops.bow_angle import size_parameter
     from raytrace.drops.sizes import size_spectrum
     from raytrace.drops.water import refractive_index
     from raytrace.optics.methods import choose, switch_over
@@ -113,7 +114,7 @@ def _method_lines(scene, rain):
     spectrum = size_spectrum(rain)
     rays_from, airy_from = switch_over(optics.paths, index)
     if spectrum.low_mm == spectrum.high_mm:
-        x = math.pi * spectrum.low_mm * 1e6 / nm
+        x = size_parameter(spectrum.low_mm, nm)
         names = ("rays", "Airy bow", "waves")
         chosen = choose("auto", x, optics.paths, index)[0]
         yield "sizes", ", ".join(f"p = {p} {names[m]}" for p, m in enumerate(chosen))
@@ -126,7 +127,7 @@ def _method_lines(scene, rain):
     diameter, weight = (part.ravel() for part in SizeAxis(spectrum).nodes(512))
     for p in range(optics.paths):
         start = min(rays_from[p], airy_from[p])
-        limit = start * nm * 1e-6 / math.pi
+        limit = start / size_parameter(1.0, nm)
         share = weight[diameter < limit].sum()
         then = "rays" if rays_from[p] <= airy_from[p] else "Airy bows"
         text = "waves for all sizes"

@@ -57,6 +57,9 @@ class Estimate:
         Radiance per unit of sunlit rain as XYZ [cd/m2].
     """
 
+    grows = True
+    """Whether rays can be added."""
+
     def __init__(
         self, index, wavelength_nm, mono_index, diameter_mm, disc_diameter_deg, paths, *, seed=0, threads=None
     ):

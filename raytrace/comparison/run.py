@@ -25,6 +25,7 @@ from raytrace.comparison.figures import (
 from raytrace.comparison.in_scene import Sight
 from raytrace.comparison.report import Report, Row
 from raytrace.comparison.wave_estimate import WaveEstimate
+from raytrace.drops.bow_angle import size_parameter
 from raytrace.drops.sizes import size_spectrum
 from raytrace.drops.water import refractive_index
 from raytrace.errors import InputError
@@ -101,7 +102,7 @@ def compare(
     method = ("rays" if is_drop else scene.optics.method) if method is None else method
     before_loading_beside()
     above_the_air = is_drop and subject.sun_elevation_deg is None
-    estimates, light = _traced(scene, wavelength, paths, seed, threads, above_the_air)
+    estimates, light = _traced(scene, wavelength, paths, seed, threads, above_the_air, whole=method == "rays")
     by_rays = None
     if method != "rays":
         by_rays = _curves(estimates[0])["xyz"]
@@ -111,7 +112,7 @@ def compare(
             for c in range(len(scene.rain))
         ]
     index = refractive_index(scene.rain[0], scene.air, [VIOLET_NM, MONO_NM, RED_NM]).real
-    size = None if method == "rays" else np.pi * _diameter_mm(scene.rain[0]) * 1e6 / MONO_NM
+    size = None if method == "rays" else size_parameter(_diameter_mm(scene.rain[0]), MONO_NM)
     places = {
         k: edges(float(index[2]), float(index[0]), float(index[1]), k, size_parameter=size)
         for k in range(1, orders + 1)
@@ -138,13 +139,14 @@ def compare(
     )
 
 
-def _traced(scene, wavelength, paths, seed, threads, above_the_air) -> tuple[list, object]:
-    """Estimates by rays, one a curtain, after the first round, and the light."""
+def _traced(scene, wavelength, paths, seed, threads, above_the_air, *, whole) -> tuple[list, object]:
+    """Estimates by rays after the first round, one a curtain, and the light; not whole: the first curtain's colours."""
+    curtains = len(scene.rain) if whole else 1
     with ThreadPoolExecutor(1) as pool:
         # the spectrum's libraries take a second to load, which the rays at 550 nm can overlap
         spectrum = pool.submit(_light, scene, wavelength, above_the_air)
-        estimates = [_estimate(scene, c, wavelength, paths, seed, threads) for c in range(len(scene.rain))]
-        for estimate in estimates:
+        estimates = [_estimate(scene, c, wavelength, paths, seed, threads) for c in range(curtains)]
+        for estimate in estimates if whole else ():
             estimate.add_mono(FIRST_RAYS[0])
         light = spectrum.result()
     for estimate in estimates:
@@ -207,10 +209,8 @@ def _refine(estimates, places, tolerance, most_rays, sight, progress) -> tuple[d
             )
             million = (first.rays[0] + first.rays[1] * first.wavelength_nm.size) * len(estimates) / 1e6
             bar.set_postfix_str(f"{million:.1f} M rays, largest error {max(worst):.2%} of {tolerance:.2%}")
-            more = [min(first.rays[k], most_rays[k] - first.rays[k]) if worst[k] > tolerance else 0 for k in range(2)]
-            if isinstance(first, WaveEstimate):
-                # a table is as good as it is
-                more = [0, 0]
+            wanted = [first.grows and error > tolerance for error in worst]
+            more = [min(first.rays[k], most_rays[k] - first.rays[k]) if wanted[k] else 0 for k in range(2)]
             if max(more) < 1000:
                 return found, seen
             if more[0] >= 1000:

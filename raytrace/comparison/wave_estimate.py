@@ -43,6 +43,8 @@ class WaveEstimate:
         As of `Estimate`, with two blocks. Diffracted light is left out of order p = 0.
     """
 
+    grows = False
+
     def __init__(
         self, scene, curtain, wavelength_nm, irradiance, method, paths, *, seed=0, threads=None, progress=False
     ):
@@ -88,11 +90,10 @@ class WaveEstimate:
         """(paths, 2, BINS) light and its standard error after the disc, at wavelength number `w`."""
         if disc is None:
             return light, error
-        value = disc.fold(light.reshape(-1, BINS).T, w).T.reshape(light.shape)
+        value = disc.fold_last(light, w)
         # rays serve the first orders only
         some = int(np.max(np.flatnonzero(error.any(axis=(1, 2))), initial=-1)) + 1
         out = np.zeros_like(light)
         if some:
-            part = error[:some]
-            out[:some] = np.sqrt(disc.fold(part.reshape(-1, BINS).T ** 2, w, squares=True).T.reshape(part.shape))
+            out[:some] = np.sqrt(disc.fold_last(error[:some] ** 2, w, squares=True))
         return value, out

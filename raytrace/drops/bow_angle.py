@@ -66,6 +66,11 @@ def bow_angle(index: np.ndarray, order: int) -> BowAngle:
     return BowAngle(incidence, refraction, deviation, scattering, 180.0 - scattering)
 
 
+def size_parameter(diameter_mm, wavelength_nm):
+    """Size parameter x = pi diameter / wavelength, of diameters in mm and wavelengths in nm."""
+    return np.pi * diameter_mm * 1e6 / wavelength_nm
+
+
 def main_maximum_deg(index: float, order: int, size_parameter: float) -> float:
     """How far a bow's main maximum stands from its ray, 1.018793 h^(1/3) x^(-2/3) (Airy 1838; van de Hulst 1957, 13.2).
 

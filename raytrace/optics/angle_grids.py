@@ -52,6 +52,12 @@ def cells(size_parameter: float, sizes: int, *, lowest: int = 2, index: float = 
     return _COARSEST * 2 ** min(level, _LEVELS - 1)
 
 
+def smooth_step(x, low: float, high: float):
+    """0 at `low`, 1 at `high` and beyond, 3 u^2 - 2 u^3 between; `low` may be the larger."""
+    u = np.clip((x - low) / (high - low), 0.0, 1.0)
+    return u * u * (3.0 - 2.0 * u)
+
+
 @lru_cache(maxsize=16)
 def cosines(count: int) -> np.ndarray:
     """(count,) cosines of the scattering angles of a grid."""

@@ -13,6 +13,7 @@ import numpy as np
 
 from raytrace import cast
 from raytrace.optics.angular_sums import amplitudes
+from raytrace.optics.methods import MOST_WAVES_X
 from raytrace.optics.partial_waves import (
     GROUP,
     debye_coefficients,
@@ -22,7 +23,7 @@ from raytrace.optics.partial_waves import (
     term_count,
 )
 
-SIZE_PARAMETERS = (0.01, 100_000.0)
+SIZE_PARAMETERS = (0.01, MOST_WAVES_X)
 _INDEX, _LARGEST_K, _MOST_PATHS = (0.5, 5.0), 5.0, 64
 
 
@@ -139,22 +140,24 @@ def order_coefficients(index: complex, size_parameter: float, row_of: np.ndarray
 
     `row_of` (paths,) int64 is the row of each order p, or -1 where it is left out.
     """
-    terms = term_count(size_parameter)
-    inner = np.empty(terms + 1, dtype=np.complex128)
-    inner_log_derivative(index * size_parameter, terms, inner)
-    coefficients = np.zeros((group_count(size_parameter), (int(row_of.max()) + 1) * 4 * GROUP))
+    terms, inner, coefficients = _room(index, size_parameter, int(row_of.max()) + 1)
     debye_coefficients(index, size_parameter, terms, row_of, inner, coefficients)
     return coefficients
 
 
 def whole_coefficients(index: complex, size_parameter: float) -> np.ndarray:
     """(groups, 4 * GROUP) coefficients of the closed sum as the angular sums read them; trusts its caller."""
+    terms, inner, coefficients = _room(index, size_parameter, 1)
+    mie_coefficients(index, size_parameter, terms, inner, coefficients)
+    return coefficients
+
+
+def _room(index, size_parameter, rows):
+    """Number of terms, what is inside the sphere, and zeros for the coefficients of so many rows."""
     terms = term_count(size_parameter)
     inner = np.empty(terms + 1, dtype=np.complex128)
     inner_log_derivative(index * size_parameter, terms, inner)
-    coefficients = np.zeros((group_count(size_parameter), 4 * GROUP))
-    mie_coefficients(index, size_parameter, terms, inner, coefficients)
-    return coefficients
+    return terms, inner, np.zeros((group_count(size_parameter), rows * 4 * GROUP))
 
 
 def partial_waves(coefficients: np.ndarray) -> np.ndarray:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from raytrace.drops.bow_angle import fresnel
+from raytrace.optics.angle_grids import smooth_step
 from raytrace.optics.table import ring_solid_angle_sr
 
 # Fraunhofer's rings are worked out to the second of these, and fade from the first: beyond, reflected light is brighter
@@ -54,8 +55,7 @@ def diffracted_sr(size_parameter: float, angle_edges_deg: np.ndarray) -> np.ndar
     within = _within(size_parameter * np.sin(np.radians(np.minimum(edges[: near + 1], 90.0))))
     out[:near] = 0.5 * np.diff(within) / ring_solid_angle_sr(edges[: near + 1])
     middle = 0.5 * (edges[:near] + edges[1 : near + 1])
-    u = np.clip((_FADE_TO_DEG - middle) / (_FADE_TO_DEG - _FADE_FROM_DEG), 0.0, 1.0)
-    out[:near] *= u * u * (3.0 - 2.0 * u)
+    out[:near] *= smooth_step(middle, _FADE_TO_DEG, _FADE_FROM_DEG)
     return out
 
 

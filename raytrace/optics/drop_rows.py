@@ -6,8 +6,9 @@ from typing import NamedTuple
 
 import numpy as np
 
+from raytrace.drops.bow_angle import size_parameter
 from raytrace.optics.airy import airy_phase_prepared, prepare_airy
-from raytrace.optics.angle_grids import BinMeans, cells, cosines
+from raytrace.optics.angle_grids import BinMeans, cells, cosines, smooth_step
 from raytrace.optics.angular_sums import add_intensities
 from raytrace.optics.debye import order_coefficients, whole_coefficients
 from raytrace.optics.diffraction import diffracted_sr, reflected_sr
@@ -117,7 +118,7 @@ class RowMaker:
             Their weights are those of `nodes`, a column an order.
         """
         bins = self.angle_deg.size
-        x = size_parameter(nodes.diameter_mm, wavelength_nm)
+        x = _within_reach(nodes.diameter_mm, wavelength_nm)
         chosen = choose(self.method, x, self.paths, index.real)
         weight = nodes.weight
         by_rays = weight * (chosen == RAYS)
@@ -154,7 +155,7 @@ class RowMaker:
         (2, bins) float64
             0 where all drops are too large [sr⁻¹].
         """
-        x = size_parameter(nodes.diameter_mm, wavelength_nm)
+        x = _within_reach(nodes.diameter_mm, wavelength_nm)
         some = (x <= _GLORY_X) & (nodes.weight[:, 0] > 0)
         totals, out = {}, np.zeros((2, self.angle_deg.size))
         for i in np.flatnonzero(some):
@@ -162,13 +163,8 @@ class RowMaker:
                 break
             count = cells(x[i], self.sizes, index=index.real)
             first = int(GLORY_FROM_DEG / 180.0 * count) - 8
-            total = totals.setdefault(count, np.zeros((1, 2, count)))
-            part = np.zeros((1, 2, count - first))
-            mu = np.ascontiguousarray(cosines(count)[first:])
             coefficients = whole_coefficients(index, x[i])
-            coefficients *= np.sqrt(nodes.weight[i, 0] / (2.0 * np.pi)) / x[i]
-            add_intensities(mu, coefficients, part)
-            total[:, :, first:] += part
+            _add_arc(totals, count, slice(first, None), coefficients, x[i], nodes.weight[i, 0])
         for _, total in sorted(totals.items()):
             out += self._means.of(total[0])
         return out / nodes.weight[some, 0].sum() if some.any() else out
@@ -234,13 +230,13 @@ class RowMaker:
 
     def _add_small_sizes(self, out, index, wavelength_nm) -> bool:
         """Small drops of the spectrum, in even steps of the diameter; whether there are any to speak of."""
-        last = WHOLE_X * (1.0 + _PASSAGE) * wavelength_nm * 1e-6 / np.pi
+        last = WHOLE_X * (1.0 + _PASSAGE) / size_parameter(1.0, wavelength_nm)
         low, high = self._spectrum.low_mm, min(self._spectrum.high_mm, last)
         if high <= low:
             return False
         step = (high - low) / _SMALL_SIZES
         diameter = low + (np.arange(_SMALL_SIZES) + 0.5) * step
-        x = size_parameter(diameter, wavelength_nm)
+        x = _within_reach(diameter, wavelength_nm)
         share = self._spectrum.density_per_mm(diameter) * step * (1.0 - _passage(x))
         if share.sum() < _NO_SHARE:
             return False
@@ -271,11 +267,7 @@ class RowMaker:
                 continue
             count = cells(one, 1)
             last = min(int(count * (self.edges_deg[out.shape[1]] / 180.0)) + 8, count)
-            part = np.zeros((1, 2, last))
-            coefficients = order_coefficients(index, one, row_of)
-            coefficients *= np.sqrt(w / (2.0 * np.pi)) / one
-            add_intensities(np.ascontiguousarray(cosines(count)[:last]), coefficients, part)
-            totals.setdefault(count, np.zeros((1, 2, count)))[:, :, :last] += part
+            _add_arc(totals, count, slice(0, last), order_coefficients(index, one, row_of), one, w)
         for _, total in sorted(totals.items()):
             out += self._means.of(total[0])[:, self._near]
         return out
@@ -292,7 +284,16 @@ class RowMaker:
 
 def glory_share(nodes: SizeNodes, wavelength_nm: float) -> float:
     """Share of the cross-section in drops small enough for a glory."""
-    return float(nodes.weight[size_parameter(nodes.diameter_mm, wavelength_nm) <= _GLORY_X, 0].sum())
+    return float(nodes.weight[_within_reach(nodes.diameter_mm, wavelength_nm) <= _GLORY_X, 0].sum())
+
+
+def _add_arc(totals, count, arc, coefficients, x, weight):
+    """Add one drop's light to the total of its grid, at some of the angles; the coefficients are of one row."""
+    mu = np.ascontiguousarray(cosines(count)[arc])
+    part = np.zeros((1, 2, mu.size))
+    coefficients *= np.sqrt(weight / (2.0 * np.pi)) / x
+    add_intensities(mu, coefficients, part)
+    totals.setdefault(count, np.zeros((1, 2, count)))[:, :, arc] += part
 
 
 def _side_by_side(parts):
@@ -309,10 +310,9 @@ def _side_by_side(parts):
 
 def _passage(x):
     """0 for small drops, 1 for large ones, smooth between."""
-    u = np.clip((x / WHOLE_X - 1.0 + _PASSAGE) / (2.0 * _PASSAGE), 0.0, 1.0)
-    return u * u * (3.0 - 2.0 * u)
+    return smooth_step(x / WHOLE_X, 1.0 - _PASSAGE, 1.0 + _PASSAGE)
 
 
-def size_parameter(diameter_mm, wavelength_nm):
-    """x = pi diameter / wavelength, kept within what the methods reach."""
-    return np.clip(np.pi * diameter_mm * 1e6 / wavelength_nm, _SMALLEST_X, _LARGEST_X)
+def _within_reach(diameter_mm, wavelength_nm):
+    """Size parameters, kept within what the methods reach."""
+    return np.clip(size_parameter(diameter_mm, wavelength_nm), _SMALLEST_X, _LARGEST_X)

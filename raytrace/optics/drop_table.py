@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import dataclasses
 import threading
 
 import numpy as np
 
+from raytrace.drops.bow_angle import fresnel
 from raytrace.jit import run_all
 from raytrace.optics.airy import prepare_airy
-from raytrace.optics.angle_grids import MANY_SIZES
+from raytrace.optics.angle_grids import MANY_SIZES, smooth_step
 from raytrace.optics.drop_rows import (
     GLORY_FROM_DEG,
     GLORY_FULL_DEG,
@@ -84,9 +86,14 @@ def drop_table(
     """
     index, wavelength = _checked(index, wavelength_nm, spectrum, method, paths, rays, bins, seed, threads)
     edges = np.linspace(0.0, 180.0, bins + 1)
-    nodes, moved = _nodes(index, wavelength, spectrum, edges, method, paths, threads)
+    # sizes are found at the first, the middle and the last wavelength
+    probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
+    disc = DiscFold(edges, _DISC_DEG, wavelength[probes], threads=threads)
+    nodes, moved = _nodes(index, wavelength, probes, disc, spectrum, edges, method, paths, threads)
     maker = RowMaker(edges, paths, method, nodes.diameter_mm.size, spectrum=spectrum)
-    whole_nodes = _whole_nodes(index, wavelength, spectrum, maker, nodes, threads) if glory else None
+    whole_nodes = None
+    if glory:
+        whole_nodes = _whole_nodes(index, wavelength, probes, disc, spectrum, maker, nodes, threads)
     phase, aureole = np.empty((paths, 2, wavelength.size, bins)), np.empty((2, wavelength.size, bins))
     whole, share = np.empty_like(aureole), np.empty((2, paths, wavelength.size))
     stop = threading.Event()
@@ -152,8 +159,6 @@ def balance(index, wavelength_nm, diameter_mm: float, paths: int) -> tuple[np.nd
     -------
     left_over, absorbed : (n_wavelength,) float64
     """
-    from raytrace.drops.bow_angle import fresnel
-
     node, weight = np.polynomial.legendre.leggauss(200)
     # b = sin(i): the share of light in a ring is d(b^2)
     i = 0.25 * np.pi * (node + 1.0)
@@ -166,14 +171,12 @@ def balance(index, wavelength_nm, diameter_mm: float, paths: int) -> tuple[np.nd
         on = reflected * kept
         left = (1.0 - reflected) * on ** (paths - 1)
         taken = (1.0 - reflected) * (1.0 - kept) * (1.0 - on ** (paths - 1)) / (1.0 - on)
-        left_over[w], absorbed[w] = (0.5 * np.sum((value) * weight) for value in (left, taken))
+        left_over[w], absorbed[w] = (0.5 * np.sum(value * weight) for value in (left, taken))
     return left_over, absorbed
 
 
-def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
-    """Sizes that are fine enough at the first, the middle and the last wavelength."""
-    probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
-    disc = DiscFold(edges, _DISC_DEG, wavelength[probes], threads=threads)
+def _nodes(index, wavelength, probes, disc, spectrum, edges, method, paths, threads):
+    """Sizes that are fine enough at the wavelengths of `probes`, for which `disc` is made."""
     middle = 0.5 * (edges[1:] + edges[:-1])
     off_axis = (middle > OFF_AXIS_DEG) & (middle < 180.0 - OFF_AXIS_DEG)
     # averages of few sizes are made on the grids of many, so that all rules see the same
@@ -206,7 +209,7 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
         folded = []
         for k, light in enumerate(rows):
             light = np.concatenate([np.minimum(light[:1], traced[k][0]), light[1:]])
-            folded.append(disc.fold(np.ascontiguousarray(light.T), k).T)
+            folded.append(disc.fold_last(light, k))
         return np.stack(folded)
 
     def distance(coarse, fine):
@@ -227,10 +230,8 @@ def _nodes(index, wavelength, spectrum, edges, method, paths, threads):
     )
 
 
-def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
-    """Sizes that are fine enough for the sum of all orders, at the first, the middle and the last wavelength."""
-    probes = sorted({0, wavelength.size // 2, wavelength.size - 1})
-    disc = DiscFold(maker.edges_deg, _DISC_DEG, wavelength[probes], threads=threads)
+def _whole_nodes(index, wavelength, probes, disc, spectrum, maker, nodes, threads):
+    """Sizes that are fine enough for the sum of all orders, at the wavelengths of `probes`."""
     seen = maker.angle_deg > GLORY_FULL_DEG
     # where most drops are too large for a glory, the others' is a small part of what is seen
     share = np.array([glory_share(nodes, wavelength[w]) for w in probes])
@@ -246,8 +247,7 @@ def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
 
     def distance(coarse, fine):
         coarse, fine = (
-            np.stack([disc.fold(np.ascontiguousarray(row[:, None]), k)[seen, 0] for k, row in enumerate(rows)])
-            for rows in (coarse, fine)
+            np.stack([disc.fold_last(row, k)[seen] for k, row in enumerate(rows)]) for rows in (coarse, fine)
         )
         # rings are seen against what is beside them, so each angle counts by its own value too, by half as much
         scale = np.minimum(fine.max(axis=-1, keepdims=True), 2.0 * fine)
@@ -259,10 +259,7 @@ def _whole_nodes(index, wavelength, spectrum, maker, nodes, threads):
 
 def _with_glory(table: ScatteringTable, whole) -> ScatteringTable:
     """Near the antisolar point the exact sum in place of the orders, with a soft edge between them."""
-    import dataclasses
-
-    u = np.clip((table.angle_deg - GLORY_FROM_DEG) / (GLORY_FULL_DEG - GLORY_FROM_DEG), 0.0, 1.0)
-    there = u * u * (3.0 - 2.0 * u)
+    there = smooth_step(table.angle_deg, GLORY_FROM_DEG, GLORY_FULL_DEG)
     orders = table.phase_sr * (1.0 - there)
     return dataclasses.replace(
         table,

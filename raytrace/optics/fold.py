@@ -187,6 +187,11 @@ class DiscFold:
         apply_weights(rows, self._start, weights**2 if squares else weights, out)
         return out
 
+    def fold_last(self, values, w: int, *, squares: bool = False) -> np.ndarray:
+        """Fold (…, bins) values at wavelength number `w`, as `fold` does; same shape."""
+        rows = values.reshape(-1, values.shape[-1]).T
+        return self.fold(rows, w, squares=squares).T.reshape(values.shape)
+
 
 def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int | None = None) -> ScatteringTable:
     """Fold a table with the sun's disc; see `ScatteringTable.with_sun_disc`.
@@ -211,9 +216,8 @@ def fold_sun_disc(table: ScatteringTable, diameter_deg: float, *, threads: int |
     def one_wavelength(w):
         for name, (values, out) in folds.items():
             squares = name == "standard_error_sr"
-            rows = values[..., w, :].reshape(-1, values.shape[-1]).T
-            folded = disc.fold(rows**2 if squares else rows, w, squares=squares)
-            out[..., w, :] = folded.T.reshape(values[..., w, :].shape)
+            here = values[..., w, :]
+            out[..., w, :] = disc.fold_last(here**2 if squares else here, w, squares=squares)
 
     run_all(one_wavelength, [(w,) for w in range(table.wavelength_nm.size)], threads=threads)
     folded = {name: out for name, (_, out) in folds.items()}

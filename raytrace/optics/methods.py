@@ -8,7 +8,6 @@ from raytrace.data import read_table
 
 METHODS = ("rays", "airy", "waves", "auto")
 RAYS, AIRY, WAVES = range(3)
-NAMES = ("rays", "airy", "waves")
 MEASURED_INDEX = (1.32, 1.353)
 """Range of the index, water's, for which the switch-over holds; it is measured at 1.3343 and checked at the ends."""
 MOST_WAVES_X = 100_000.0
